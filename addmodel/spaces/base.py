@@ -1,0 +1,227 @@
+"""The contract of a space, and the Demmler–Reinsch form that every penalised space is brought to.
+
+Which space when: `line` for a number whose effect is straight, `levels` for categories, `curve` for a
+number whose effect bends, `cycle` for a number that comes round again (hour, direction, season).
+
+A space is *laid* on the data: over its distinct support points t_1..t_m with weights ω_l it has a
+roughness J with a known null space. The constant is dropped (the intercept has it); the rest of the
+null space is the unpenalised part N; the penalised part P has columns z_k = φ_k/√γ_k, where the φ_k
+are orthonormal in the data's weights, Σ_l ω_l φ_j φ_k / Σ ω = δ_jk, orthogonal to the null space, and
+have roughness γ_k, ascending (Demmler & Reinsch 1975, Numer. Math. 24). So J(Σ u_k z_k) = Σ u_k².
+"""
+
+from __future__ import annotations
+
+from abc import ABC, abstractmethod
+from dataclasses import dataclass, replace
+from typing import Self
+
+import numpy as np
+import numpy.typing as npt
+import scipy.linalg
+import scipy.sparse
+
+FloatArray = npt.NDArray[np.float64]
+BoolArray = npt.NDArray[np.bool_]
+
+
+@dataclass(frozen=True)
+class Space(ABC):
+    """A space laid on data: it turns covariate values into columns, row by row.
+
+    Laws (tests/test_spaces.py holds every space to them):
+
+    - row i of every result depends on x[i] only;
+    - penalised columns are orthogonal to the constant and to N in the data's weights, and have
+      weighted mean square 1/γ_k, γ ascending;
+    - the columns of a smaller detail are the first columns of a larger one.
+    """
+
+    key: str
+    """Key of the covariate's column in the table."""
+
+    @property
+    @abstractmethod
+    def unpenalised_names(self) -> tuple[str, ...]:
+        """Names of the columns of N, in order."""
+
+    @abstractmethod
+    def unpenalised(self, x: npt.NDArray[np.generic]) -> FloatArray:
+        """Columns of N at x, shape (n, len(unpenalised_names))."""
+
+    @property
+    def size(self) -> int:
+        """Number of penalised functions kept."""
+        return 0
+
+    @property
+    def most(self) -> int:
+        """Number of penalised functions that the distinct points allow."""
+        return 0
+
+    def penalised(self, x: npt.NDArray[np.generic]) -> FloatArray:
+        """Columns of P at x, shape (n, size)."""
+        return np.empty((len(x), 0))
+
+    def outside(self, x: npt.NDArray[np.generic]) -> BoolArray:
+        """Which rows lie outside the data the space was laid on, shape (n,)."""
+        return np.zeros(len(x), dtype=bool)
+
+
+@dataclass(frozen=True)
+class Penalised(Space):
+    """What `curve` and `cycle` share: a cubic spline kept as value and slope at its knots.
+
+    Every kept function is a cubic between knots, so value and slope there are all of it (cubic
+    Hermite form). `knots`, `value` and `slope` are in the scaled covariate t.
+    """
+
+    low: float
+    """The covariate's value at t = 0."""
+    length: float
+    """The covariate's range: t = (x − low) / length."""
+    distinct: int
+    """Number of distinct points m in the data."""
+    size_kept: int
+    knots: FloatArray  # (r,)
+    value: FloatArray  # (r, K), K >= size_kept
+    slope: FloatArray  # (r, K), d/dt
+    gamma: FloatArray  # (K,) roughness of the orthonormal functions
+    cap: int | None
+    """The formula's `detail=`: never more functions than this; None where the data choose."""
+
+    @property
+    def size(self) -> int:
+        return self.size_kept
+
+    @property
+    def most(self) -> int:
+        allowed = self.distinct - 1 - len(self.unpenalised_names)
+        return allowed if self.cap is None else min(self.cap, allowed)
+
+    def keep(self, size: int) -> Self:
+        """The same space with its first `size` functions."""
+        return replace(self, size_kept=min(size, len(self.gamma), self.most))
+
+    @abstractmethod
+    def scaled(self, x: npt.NDArray[np.generic]) -> FloatArray:
+        """The scaled covariate t at x, shape (n,)."""
+
+    @abstractmethod
+    def waves(self, cells: FloatArray) -> FloatArray:
+        """Orthonormal wave coefficients of cell values, slow waves first, the constant left out.
+
+        A cheap stand-in for the functions beyond those kept: over equal cells of the data's weight
+        the Demmler–Reinsch functions oscillate like cosines (`curve`) or sine–cosine pairs
+        (`cycle`), the k-th with about k half waves.
+        """
+
+    def penalised(self, x: npt.NDArray[np.generic]) -> FloatArray:
+        t = self.scaled(x)
+        k = self.size
+        inside = np.clip(t, self.knots[0], self.knots[-1])
+        columns: FloatArray = hermite(self.knots, inside) @ np.concatenate(
+            [self.value[:, :k], self.slope[:, :k]]
+        )
+        # Outside the data a natural spline goes on as a straight line.
+        for beyond, end in ((t < self.knots[0], 0), (t > self.knots[-1], -1)):
+            if beyond.any():
+                columns[beyond] += np.outer(t[beyond] - self.knots[end], self.slope[end, :k])
+        return columns
+
+
+def hermite(knots: FloatArray, t: FloatArray) -> scipy.sparse.csr_array:
+    """Matrix H (n, 2r) with f(t) = H [values; slopes] for a piecewise cubic f, t within the knots."""
+    r, n = len(knots), len(t)
+    left = np.clip(np.searchsorted(knots, t, side="right") - 1, 0, r - 2)
+    h = knots[left + 1] - knots[left]
+    s = (t - knots[left]) / h
+    weights = np.stack(
+        [
+            (1 + 2 * s) * (1 - s) ** 2,
+            s**2 * (3 - 2 * s),
+            h * s * (1 - s) ** 2,
+            -h * s**2 * (1 - s),
+        ],
+        axis=1,
+    )
+    where = np.stack([left, left + 1, left + r, left + r + 1], axis=1)
+    return scipy.sparse.csr_array(
+        (weights.ravel(), where.ravel(), np.arange(0, 4 * n + 1, 4)), shape=(n, 2 * r)
+    )
+
+
+def demmler_reinsch(
+    values: FloatArray, null: FloatArray, weights: FloatArray
+) -> tuple[FloatArray, FloatArray, FloatArray]:
+    """Demmler–Reinsch form of the functions B with roughness J(Bz) = Σz².
+
+    Parameters
+    ----------
+    values : (m, q)
+        B at the support points.
+    null : (m, p)
+        Functions without roughness at the support points, the constant first.
+    weights : (m,)
+        Weights ω.
+
+    Returns
+    -------
+    coordinates : (q, K)
+        z-coordinates of the columns z_k = φ_k/√γ_k, orthonormal, smoothest first.
+    offset : (p, K)
+        What is to be taken away, in terms of `null`: z_k = B coordinates − null offset.
+    gamma : (K,)
+        Roughness of the φ_k, ascending.
+
+    Notes
+    -----
+    The singular values of diag(ω)^½ P B / √Σω, P the weighted projection off the null space, are
+    γ^{-½}. Worked from this inverse and never from the roughness matrix, whose pencil loses all
+    digits on unevenly spread points.
+    """
+    root = np.sqrt(weights / weights.sum())[:, None]
+    q_null, r_null = np.linalg.qr(root * null)
+    rooted = root * values
+    on_null = q_null.T @ rooted
+    left = rooted - q_null @ on_null
+    left -= q_null @ (q_null.T @ left)  # twice is enough: orthogonal to working precision
+    _, singular, right = scipy.linalg.svd(left, full_matrices=False, check_finite=False)
+    count = min(len(values) - null.shape[1], int(np.sum(singular > 1e-15 * singular[0])))
+    coordinates = right[:count].T
+    offset = scipy.linalg.solve_triangular(r_null, on_null @ coordinates)
+    # The sign of a singular vector is arbitrary: take the one that ends above zero.
+    sign = np.where((values[-1] @ coordinates - null[-1] @ offset) < 0, -1.0, 1.0)
+    return coordinates * sign, offset * sign, singular[:count] ** -2.0
+
+
+def support(t: FloatArray, weights: FloatArray) -> tuple[FloatArray, FloatArray]:
+    """Distinct points, ascending, and the weight summed at each."""
+    points, where = np.unique(t, return_inverse=True)
+    return points, np.bincount(where, weights, minlength=len(points))
+
+
+def choose_knots(points: FloatArray, weights: FloatArray, count: int) -> FloatArray:
+    """At most `count` of the points, the first and the last among them.
+
+    The k-th function oscillates with phase ∝ ∫ (γ_k ρ(t))^{1/4} dt, ρ the density of the weights
+    (the equation f'''' = γ ρ f in its short-wave limit; Silverman 1984, Ann. Stat. 12, has the same
+    power for the local bandwidth), so knots are spread with density ρ^{1/4}. A gap between
+    neighbours adds ω^{1/4} h^{3/4}; none counts for more than one knot, so that one far point
+    cannot take the knots of all others.
+    """
+    m = len(points)
+    if m <= count:
+        return points
+    phase = (0.5 * (weights[1:] + weights[:-1])) ** 0.25 * np.diff(points) ** 0.75
+    phase /= phase.max()
+    # Largest cap c with Σ min(phase/c, 1) = count − 1: try each number of capped gaps.
+    descending = np.sort(phase)[::-1]
+    rest = phase.sum() - np.concatenate([[0.0], np.cumsum(descending)])
+    capped = np.arange(count - 1)
+    caps = rest[: count - 1] / (count - 1 - capped)
+    fits = np.flatnonzero(caps >= descending[: count - 1])
+    cap = caps[fits[0]] if len(fits) else descending[count - 2]
+    along = np.concatenate([[0.0], np.cumsum(np.minimum(phase / cap, 1.0))])
+    chosen = np.searchsorted(along, np.linspace(0.0, along[-1], count) - 1e-9)
+    return points[np.unique(np.clip(np.concatenate([[0], chosen, [m - 1]]), 0, m - 1))]

@@ -1,0 +1,132 @@
+"""cycle(x, period=): the periodic cubic spline, J(f) = ∫ f''(t)² dt over one period scaled to [0, 1]."""
+
+from __future__ import annotations
+
+from dataclasses import dataclass
+
+import numpy as np
+import numpy.typing as npt
+import scipy.fft
+import scipy.linalg
+
+from addmodel.spaces.base import (
+    FloatArray,
+    Penalised,
+    choose_knots,
+    demmler_reinsch,
+    hermite,
+    support,
+)
+
+CALENDAR = ("year", "month", "week", "day")
+
+
+@dataclass(frozen=True)
+class Cycle(Penalised):
+    """Periodic splines; the null space is the constant alone, so nothing is unpenalised."""
+
+    period: float | str
+    """A length in the covariate's units, or for dates one of "year", "month", "week", "day"."""
+
+    @classmethod
+    def lay(
+        cls,
+        key: str,
+        x: FloatArray,
+        weights: FloatArray,
+        size: int,
+        cap: int | None,
+        period: float | str,
+    ) -> Cycle:
+        """Lay the space on the data; arguments as for `Curve.lay`."""
+        points, omega = support(phase(x, period), weights)
+        size = min(size + size % 2, len(points) - 1)  # waves come in pairs: keep them together
+        turn = np.append(points, points[0] + 1.0)
+        knots = choose_knots(turn, np.append(omega, omega[0]), max(150, int(2.5 * size)))
+        value, slope = periodic(knots)
+        at_points = hermite(knots, points) @ np.concatenate([value, slope])
+        constant = np.ones((len(points), 1))
+        coordinates, offset, gamma = demmler_reinsch(at_points, constant, omega)
+        return cls(
+            key=key,
+            low=0.0,
+            length=1.0 if isinstance(period, str) else float(period),
+            distinct=len(points),
+            size_kept=min(size, len(gamma)),
+            knots=knots,
+            value=value @ coordinates - offset[0],
+            slope=slope @ coordinates,
+            gamma=gamma,
+            cap=cap,
+            period=period,
+        )
+
+    @property
+    def unpenalised_names(self) -> tuple[str, ...]:
+        return ()
+
+    def unpenalised(self, x: npt.NDArray[np.generic]) -> FloatArray:
+        return np.empty((len(x), 0))
+
+    def scaled(self, x: npt.NDArray[np.generic]) -> FloatArray:
+        t = phase(np.asarray(x, dtype=np.float64), self.period)
+        return np.where(t < self.knots[0], t + 1.0, t)
+
+    def waves(self, cells: FloatArray) -> FloatArray:
+        transformed = scipy.fft.rfft(cells, norm="ortho")[1:]
+        if len(cells) % 2 == 0:
+            transformed = transformed[:-1]  # the shortest wave has no sine beside its cosine
+        pairs = np.sqrt(2.0) * np.stack([transformed.real, transformed.imag], axis=1)
+        return np.asarray(pairs.ravel(), dtype=np.float64)
+
+
+def phase(x: FloatArray, period: float | str) -> FloatArray:
+    """Position within the period, in [0, 1); for a calendar period x is in days since 1970-01-01.
+
+    A year or month is as long as the calendar makes it, so that its seam is always at its first
+    day; a week starts on Monday.
+    """
+    if not isinstance(period, str):
+        t = np.mod(x, period) / period
+    elif period == "day":
+        t = np.mod(x, 1.0)
+    elif period == "week":
+        t = np.mod(x + 3.0, 7.0) / 7.0  # 1970-01-01 was a Thursday
+    else:
+        known = np.isfinite(x)
+        days = np.floor(np.where(known, x, 0.0)).astype("datetime64[D]")
+        unit = "Y" if period == "year" else "M"
+        start = days.astype(f"datetime64[{unit}]")
+        first = start.astype("datetime64[D]").astype(np.float64)
+        after = (start + 1).astype("datetime64[D]").astype(np.float64)
+        t = np.where(known, (x - first) / (after - first), np.nan)
+    return np.where(t >= 1.0, 0.0, t)  # a tiny negative x comes out of the modulus as 1
+
+
+def periodic(knots: FloatArray) -> tuple[FloatArray, FloatArray]:
+    """Values and slopes at the knots of periodic B with ∫ (Bz)''² = Σz², shape (r, r − 1).
+
+    `knots` are τ_0 < … < τ_{r−1} = τ_0 + 1, the last the first come round. f'' = Σ c_j hat_j over
+    the r − 1 different knots with ∫ f'' = 0; the slope is f'' integrated, less its mean, and the
+    value is the slope integrated. One column of the result is zero (the constraint's direction).
+    """
+    h = np.diff(knots)
+    r = len(h)
+    before = np.roll(h, 1)
+    gram = np.diag((before + h) / 3)
+    where = np.arange(r)
+    np.add.at(gram, (where, (where + 1) % r), h / 6)
+    np.add.at(gram, ((where + 1) % r, where), h / 6)
+    factor = np.linalg.cholesky(gram)
+    second = scipy.linalg.solve_triangular(factor, np.eye(r), lower=True).T
+    direction = ((before + h) / 2) @ second
+    direction /= np.linalg.norm(direction)
+    second -= np.outer(second @ direction, direction)
+    second = np.concatenate([second, second[:1]])
+    step = h[:, None]
+    zero = np.zeros((1, r))
+    slope = np.concatenate([zero, np.cumsum(step * (second[:-1] + second[1:]) / 2, axis=0)])
+    rise = step * slope[:-1] + step**2 * (2 * second[:-1] + second[1:]) / 6
+    slope -= rise.sum(axis=0)
+    rise -= step * rise.sum(axis=0)
+    return np.concatenate([zero, np.cumsum(rise, axis=0)]), slope

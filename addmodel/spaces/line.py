@@ -1,0 +1,33 @@
+"""A plain number: a straight line, unpenalised, as it is written."""
+
+from __future__ import annotations
+
+from dataclasses import dataclass
+
+import numpy as np
+import numpy.typing as npt
+
+from addmodel.spaces.base import BoolArray, FloatArray, Space
+
+
+@dataclass(frozen=True)
+class Line(Space):
+    """The column x itself."""
+
+    low: float
+    high: float
+
+    @classmethod
+    def lay(cls, key: str, x: FloatArray) -> Line:
+        """Lay the space on the data: x is (n,)."""
+        return cls(key, float(x.min()), float(x.max()))
+
+    @property
+    def unpenalised_names(self) -> tuple[str, ...]:
+        return (self.key,)
+
+    def unpenalised(self, x: npt.NDArray[np.generic]) -> FloatArray:
+        return np.asarray(x, dtype=np.float64)[:, None]
+
+    def outside(self, x: npt.NDArray[np.generic]) -> BoolArray:
+        return np.asarray((x < self.low) | (x > self.high), dtype=bool)
