@@ -10,9 +10,10 @@ place found there starts Newton again.
 from __future__ import annotations
 
 from collections.abc import Sequence
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 
 import numpy as np
+import scipy.optimize
 
 from addmodel.solve.criteria import Criterion
 from addmodel.solve.quadratic import Point, Problem
@@ -55,7 +56,12 @@ class Bounds:
         return cls(np.log(np.array(small) * RANGE), np.log(np.array(large) / RANGE))
 
 
-def choose(problem: Problem, criterion: Criterion, fixed: Sequence[float | None]) -> Smoothness:
+def choose(
+    problem: Problem,
+    criterion: Criterion,
+    fixed: Sequence[float | None],
+    degrees: Sequence[float | None],
+) -> Smoothness:
     """The smoothing parameters that the criterion prefers.
 
     Parameters
@@ -66,8 +72,44 @@ def choose(problem: Problem, criterion: Criterion, fixed: Sequence[float | None]
         What is made small.
     fixed : sequence of float or None
         A block's smoothing parameter where it is given, None where it is to be chosen.
+    degrees : sequence of float or None
+        A block's effective degrees of freedom where those are given instead.
     """
     given = np.array([np.nan if f is None else f for f in fixed], dtype=np.float64)
+    targets = {j: d for j, d in enumerate(degrees) if d is not None}
+    if not targets:
+        return choose_free(problem, criterion, given)
+    for j, target in targets.items():
+        given[j] = ridge_for(np.diag(problem.schur)[problem.slices[j]], target)
+    for _ in range(50):
+        # The others at their best for these, then these for the others, until nothing moves.
+        found = choose_free(problem, criterion, given)
+        before = given.copy()
+        smoothing = found.point.smoothing.copy()
+        for j, target in targets.items():
+            given[j] = smoothing[j] = ridge_reaching(problem, smoothing, j, target)
+        if np.nanmax(np.abs(np.log(given / before))) < 1e-9:
+            break
+    return found
+
+
+def ridge_reaching(problem: Problem, smoothing: FloatArray, block: int, target: float) -> float:
+    """λ of a block that gives it `target` effective degrees of freedom beside the others."""
+
+    def excess(rho: float) -> float:
+        trial = smoothing.copy()
+        trial[block] = np.exp(rho)
+        point = problem.at(trial)
+        return problem.sizes[block] - float(point.lost[point.blocks.index(block)]) - target
+
+    bounds = Bounds.of(problem)
+    return float(
+        np.exp(scipy.optimize.brentq(excess, bounds.lower[block], bounds.upper[block], xtol=1e-11))
+    )
+
+
+def choose_free(problem: Problem, criterion: Criterion, given: FloatArray) -> Smoothness:
+    """As `choose`; `given` holds NaN where a smoothing parameter is to be chosen."""
     free = np.flatnonzero(np.isnan(given))
     bounds = Bounds.of(problem)
     if len(free) == 0:
@@ -92,6 +134,15 @@ def choose(problem: Problem, criterion: Criterion, fixed: Sequence[float | None]
             break
         best = found
     return Smoothness(best.point, steps, best.settled, best.gradient, best.at_zero)
+
+
+def newton_from(
+    found: Smoothness, problem: Problem, criterion: Criterion, free: Sequence[bool]
+) -> Smoothness:
+    """Newton once more from a solution already found, on sums taken anew about it."""
+    moving = np.flatnonzero(free)
+    again = newton(problem, criterion, found.point.smoothing, moving, Bounds.of(problem))
+    return replace(again, steps=found.steps + again.steps - 1)
 
 
 def starts(problem: Problem, free: np.ndarray) -> list[FloatArray]:

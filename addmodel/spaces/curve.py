@@ -46,8 +46,8 @@ class Curve(Penalised):
         low, high = float(x.min()), float(x.max())
         points, omega = support((x - low) / (high - low), weights)
         size = min(size, len(points) - 2)
-        # 2.5 knots a function keep the last kept function good to about 1e-3 of its roughness.
-        knots = choose_knots(points, omega, max(150, int(2.5 * size)))
+        # Two knots a function: the roughness of the last one kept is then good to about 1.5 %.
+        knots = choose_knots(points, omega, max(120, 2 * size))
         value, slope = bent(knots)
         at_points = hermite(knots, points) @ np.concatenate([value, slope])
         line = np.stack([np.ones_like(points), points], axis=1)

@@ -42,7 +42,7 @@ class Cycle(Penalised):
         points, omega = support(phase(x, period), weights)
         size = min(size + size % 2, len(points) - 1)  # waves come in pairs: keep them together
         turn = np.append(points, points[0] + 1.0)
-        knots = choose_knots(turn, np.append(omega, omega[0]), max(150, int(2.5 * size)))
+        knots = choose_knots(turn, np.append(omega, omega[0]), max(120, 2 * size))
         value, slope = periodic(knots)
         at_points = hermite(knots, points) @ np.concatenate([value, slope])
         constant = np.ones((len(points), 1))

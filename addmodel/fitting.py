@@ -1,0 +1,307 @@
+"""The verb `fit` and the fitted model: its methods are the table of contents of what can be asked."""
+
+from __future__ import annotations
+
+import warnings
+from collections.abc import Sequence
+from dataclasses import dataclass
+from typing import TYPE_CHECKING, Any, Literal
+
+import numpy as np
+import pandas as pd
+
+from addmodel import figures
+from addmodel.data import read
+from addmodel.effects import Effect, effect
+from addmodel.errors import Caution, ModelError, nearest
+from addmodel.estimate import Estimate, Progress, estimate
+from addmodel.formula import parse
+from addmodel.inference import (
+    DEFAULT_SEED,
+    coefficients_table,
+    components_table,
+    posterior_draws,
+)
+from addmodel.outcomes import outcome_named
+from addmodel.prediction import model_columns, predict
+from addmodel.solve.criteria import CRITERIA
+from addmodel.spaces.base import FloatArray
+from addmodel.summary import Summary, deviance_reduction, summarise
+
+if TYPE_CHECKING:
+    from matplotlib.figure import Figure
+
+
+def fit(
+    formula: str,
+    data: object,
+    *,
+    outcome: str = "gaussian",
+    weights: object = None,
+    counts: object = None,
+    offset: object = None,
+    criterion: str = "reml",
+    missing: Literal["drop", "error"] = "drop",
+    progress: Progress | None = None,
+) -> Fit:
+    """Fit an additive model whose smoothness is chosen by the data.
+
+    Parameters
+    ----------
+    formula : str
+        For example ``"y ~ curve(x) + cycle(hour, period=24) + site"``. A number stands for a
+        straight line, text and categories for levels, ``C(x)`` makes levels of a number,
+        ``curve(x)`` is a cubic smoothing spline and ``cycle(x, period=)`` a periodic one. Options
+        of curve and cycle: ``detail=`` (most functions, or "all"), ``smoothing=`` (fixes the
+        smoothing parameter), ``df=`` (fixes the effective degrees of freedom).
+    data : table, mapping or path
+        A pandas, polars or arrow table, a mapping of names to arrays of equal length, or the path
+        of a CSV or Parquet file.
+    outcome : str
+        What is assumed of the outcome: "gaussian".
+    weights : str or array (n,), optional
+        Precision weights: a row's variance is σ²/weight. A column, an expression, or values.
+    counts : str or array (n,), optional
+        A row stands for that many equal rows.
+    offset : str or array (n,), optional
+        A known part of the mean.
+    criterion : {"reml", "gcv"}
+        How smoothness is chosen: restricted maximum likelihood, or generalised cross-validation.
+    missing : {"drop", "error"}
+        What to do with rows that lack a value that is used. Dropped rows are counted in the summary.
+    progress : callable, optional
+        Called with a short text as the work goes on.
+
+    Returns
+    -------
+    Fit
+        The fitted model.
+
+    Raises
+    ------
+    AddmodelError
+        FormulaError, DataError or ModelError; the message says what, where, and what to do.
+
+    Warns
+    -----
+    Caution
+        If the choice of smoothness did not settle.
+    """
+    if criterion not in CRITERIA:
+        raise ModelError(f"criterion='{criterion}' is not known. {nearest(criterion, CRITERIA)}")
+    assumed = outcome_named(outcome)
+    model = parse(formula)
+    table = read(data, model, weights=weights, counts=counts, offset=offset, missing=missing)
+    given = {"weights": weights, "counts": counts, "offset": offset}
+    arguments = {
+        name: f'"{value}"' if isinstance(value, str) else name
+        for name, value in given.items()
+        if value is not None
+    }
+    found = estimate(
+        model, table, assumed, CRITERIA[criterion], arguments, progress or (lambda text: None)
+    )
+    if not found.settled:
+        unsettled = next(c for c in found.cautions if "did not settle" in c)
+        warnings.warn(unsettled, Caution, stacklevel=2)
+    return Fit(found)
+
+
+@dataclass(frozen=True, repr=False)
+class Fit:
+    """A fitted model. Everything it answers is derived from `estimate`, which never changes."""
+
+    estimate: Estimate
+
+    def __repr__(self) -> str:
+        return str(self.summary())
+
+    def summary(self) -> Summary:
+        """How the fit went, the model in words, components, coefficients, cautions, the recipe."""
+        return summarise(self.estimate)
+
+    @property
+    def formula(self) -> str:
+        """The formula as written."""
+        return self.estimate.model.text
+
+    @property
+    def components(self) -> pd.DataFrame:
+        """One row a component: effective_df, share, smoothing (λ with x scaled to [0, 1])."""
+        return components_table(self.estimate)
+
+    @property
+    def coefficients(self) -> pd.DataFrame:
+        """One row an unpenalised coefficient: estimate, std_error, lower, upper, p.
+
+        The intercept is the mean at numbers 0, first levels and curves at their average.
+        """
+        return coefficients_table(self.estimate)
+
+    @property
+    def cautions(self) -> tuple[str, ...]:
+        """What the reader should know before using the numbers."""
+        return self.estimate.cautions
+
+    @property
+    def linear_predictor(self) -> FloatArray:
+        """Linear predictor of the rows used, offset included, shape (n,)."""
+        if self.estimate.linear_predictor is None:
+            raise ModelError(_ROWLESS)
+        return self.estimate.linear_predictor
+
+    @property
+    def fitted(self) -> FloatArray:
+        """Fitted means of the rows used, shape (n,)."""
+        return self.estimate.outcome.mean(self.linear_predictor)
+
+    @property
+    def rows(self) -> np.ndarray[Any, np.dtype[np.int64]]:
+        """Positions, in the data as read, of the rows used, shape (n,)."""
+        if self.estimate.table is None:
+            raise ModelError(_ROWLESS)
+        return self.estimate.table.rows
+
+    def residuals(self, kind: Literal["response", "scaled"] = "scaled") -> FloatArray:
+        """Residuals of the rows used, shape (n,).
+
+        Parameters
+        ----------
+        kind : {"scaled", "response"}
+            "response": outcome − fitted. "scaled": that times √weight/σ, so that its variance
+            is about 1.
+        """
+        table = self.estimate.table
+        if table is None:
+            raise ModelError(_ROWLESS)
+        if kind not in ("response", "scaled"):
+            raise ModelError(f"kind={kind!r} is not known. {nearest(kind, ('response', 'scaled'))}")
+        plain = table.outcome - self.fitted
+        if kind == "response":
+            return plain
+        return plain * np.sqrt(table.weights / self.estimate.scale)
+
+    @property
+    def effective_df(self) -> float:
+        """Effective degrees of freedom of the whole model, the intercept included."""
+        return float(self.estimate.column_df.sum())
+
+    @property
+    def scale(self) -> float:
+        """The variance σ² of a row of weight one."""
+        return self.estimate.scale
+
+    @property
+    def deviance(self) -> float:
+        """Residual sum of squares, weighted."""
+        return self.estimate.deviance
+
+    @property
+    def deviance_reduction(self) -> float:
+        """The part of the null deviance that the model takes away."""
+        return deviance_reduction(self.estimate)
+
+    @property
+    def log_likelihood(self) -> float:
+        """Log-likelihood at the estimated mean, with the variance deviance/n."""
+        return self.estimate.log_likelihood
+
+    @property
+    def criterion_value(self) -> float:
+        """REML: log restricted likelihood. GCV: the score n·D/(n − τ)²."""
+        return self.estimate.criterion_value
+
+    @property
+    def smoothing(self) -> pd.Series[float]:
+        """Smoothing parameter of each penalised block, by component; infinite where it ran there."""
+        design = self.estimate.design
+        names = [design.components[j].name for j in design.block_owners]
+        return pd.Series(self.estimate.smoothing, index=pd.Index(names, name="component"))
+
+    def predict(
+        self,
+        new: object,
+        scale: Literal["outcome", "link"] = "outcome",
+        interval: float | None = None,
+        new_observation: bool = False,
+        only: str | Sequence[str] | None = None,
+        without: str | Sequence[str] | None = None,
+        unseen: Literal["error", "base", "average"] = "error",
+        missing: Literal["keep", "error"] = "keep",
+    ) -> FloatArray | pd.DataFrame:
+        """Predict the mean at new rows.
+
+        Parameters
+        ----------
+        new : table, mapping or path
+            New rows, with the covariates' columns.
+        scale : {"outcome", "link"}
+            The mean itself, or the linear predictor.
+        interval : float, optional
+            Level of an interval, such as 0.95.
+        new_observation : bool
+            The interval is for a new observation (of weight one), not for the mean.
+        only, without : str or sequence of str, optional
+            Only these components (without the intercept), or all but these.
+        unseen : {"error", "base", "average"}
+            What a level stands for that the fit has not seen: an error, the base level, or the
+            average over the data.
+        missing : {"keep", "error"}
+            A row that lacks a covariate gets a missing prediction and a caution, or is an error.
+
+        Returns
+        -------
+        ndarray (n,) or DataFrame
+            Without `interval` an array; with it a frame with prediction, std_error, lower, upper
+            and outside (the row lies outside the data fitted). Row i answers row i. An offset is
+            not added.
+        """
+        return predict(
+            self.estimate,
+            new,
+            scale=scale,
+            interval=interval,
+            new_observation=new_observation,
+            only=only,
+            without=without,
+            unseen=unseen,
+            missing=missing,
+        )
+
+    def effect(self, component: str, at: object = None, level: float = 0.95) -> Effect:
+        """A component's partial effect with its pointwise band.
+
+        Parameters
+        ----------
+        component : str
+            Its name, as in `components`; "cycle(hour)" finds "cycle(hour, period=24)".
+        at : sequence, optional
+            Values of the covariate; by default evenly over the data, or every level.
+        level : float
+            Level of the band.
+        """
+        return effect(self.estimate, component, at=at, level=level)
+
+    def plot(self) -> Figure:
+        """A sheet of all components' effects, on one scale."""
+        names = [c.name for c in self.estimate.design.components]
+        if not names:
+            raise ModelError("The model has no components to draw.")
+        return figures.sheet([self.effect(name).panel for name in names])
+
+    def columns(self, new: object) -> pd.DataFrame:
+        """The model's columns at new rows, (n, P); columns @ coefficients = linear predictor.
+
+        Their order is that of the coefficients in `draws`: the intercept, unpenalised columns,
+        then each component's penalised functions.
+        """
+        return model_columns(self.estimate, new)
+
+    def draws(self, count: int = 1000, seed: int = DEFAULT_SEED) -> FloatArray:
+        """Posterior draws of all coefficients, shape (count, P), in the order of `columns`."""
+        return posterior_draws(self.estimate, count, seed)
+
+
+_ROWLESS = (
+    "This fit was loaded from a file, which holds no rows: predict(data) gives fitted values anew."
+)

@@ -1,0 +1,134 @@
+"""Uncertainty: linear functions of the coefficients with standard errors, and posterior draws.
+
+Bands are Bayesian posterior intervals, β ~ N(β̂, σ²A⁻¹) (Wahba 1983, J. R. Stat. Soc. B 45;
+Silverman 1985, J. R. Stat. Soc. B 47), which cover across the function (Nychka 1988, J. Am. Stat.
+Assoc. 83). The smoothing parameters count as known.
+"""
+
+from __future__ import annotations
+
+import numpy as np
+import pandas as pd
+import scipy.linalg
+import scipy.stats
+
+from addmodel.errors import ModelError
+from addmodel.estimate import Estimate
+from addmodel.spaces.base import FloatArray
+
+DEFAULT_SEED = 20_260_101
+
+
+def quantile(estimate: Estimate, level: float) -> float:
+    """Half-width of an interval in standard errors.
+
+    Student's t on n − τ degrees of freedom, since the variance is estimated.
+    """
+    check_level(level)
+    left = max(estimate.n - float(estimate.column_df.sum()), 1.0)
+    return float(scipy.stats.t.ppf(0.5 + level / 2, left))
+
+
+def check_level(level: float) -> None:
+    """A confidence level is a number between 0 and 1."""
+    if isinstance(level, bool) or not isinstance(level, int | float) or not 0 < level < 1:
+        raise ModelError(f"A level is a number between 0 and 1, such as 0.95; got {level!r}.")
+
+
+def linear(
+    estimate: Estimate, columns: FloatArray, places: np.ndarray | None = None
+) -> tuple[FloatArray, FloatArray]:
+    """Value and standard error of columns · coefficients.
+
+    Parameters
+    ----------
+    columns : (n, k)
+        In the solver's coordinates.
+    places : (k,) or None
+        Which coefficients they belong to; None: all.
+
+    Returns
+    -------
+    value, std_error : (n,)
+    """
+    chosen = np.arange(len(estimate.coefficients)) if places is None else places
+    value = columns @ estimate.coefficients[chosen]
+    covariance = estimate.covariance[np.ix_(chosen, chosen)]
+    variance = np.einsum("ij,ij->i", columns @ covariance, columns)
+    return value, np.sqrt(np.maximum(variance, 0.0))
+
+
+def coefficients_table(estimate: Estimate, level: float = 0.95) -> pd.DataFrame:
+    """Unpenalised coefficients as reported: estimate, std_error, lower, upper, p."""
+    design = estimate.design
+    p = design.p
+    change = design.reporting()[:p, :p]
+    value = change @ estimate.coefficients[:p]
+    covariance = change @ estimate.covariance[:p, :p] @ change.T
+    error = np.sqrt(np.diag(covariance))
+    half = quantile(estimate, level) * error
+    left = max(estimate.n - float(estimate.column_df.sum()), 1.0)
+    with np.errstate(divide="ignore", invalid="ignore"):
+        p_value = 2 * scipy.stats.t.sf(np.abs(value / error), left)
+    return pd.DataFrame(
+        {
+            "estimate": value,
+            "std_error": error,
+            "lower": value - half,
+            "upper": value + half,
+            "p": p_value,
+        },
+        index=pd.Index(design.names[:p], name="coefficient"),
+    )
+
+
+def components_table(estimate: Estimate) -> pd.DataFrame:
+    """One row a component: effective_df, share, smoothing.
+
+    `share` is cov(f_j, η)/var(η) over the data in the prior weights, η without offset and intercept
+    (Pratt 1987; Gu 1992, J. Am. Stat. Assoc. 87): the shares sum to 1, and one can be negative.
+    """
+    design = estimate.design
+    beta = estimate.coefficients.copy()
+    beta[0] = 0.0
+    # The columns are centred in the data's weights, so sums of products are covariances.
+    pulled = estimate.gram @ beta
+    total = float(beta @ pulled)
+    rows = []
+    for j in range(len(design.components)):
+        places = design.places(j)
+        own = [
+            float(lam)
+            for lam, owner in zip(estimate.smoothing, design.block_owners, strict=True)
+            if owner == j
+        ]
+        rows.append(
+            {
+                "effective_df": estimate.component_df(j),
+                "share": float(beta[places] @ pulled[places]) / total if total > 0 else np.nan,
+                "smoothing": own[0] if own else np.nan,
+            }
+        )
+    names = [c.name for c in design.components]
+    return pd.DataFrame(
+        rows,
+        index=pd.Index(names, name="component"),
+        columns=["effective_df", "share", "smoothing"],
+    )
+
+
+def posterior_draws(estimate: Estimate, count: int, seed: int) -> FloatArray:
+    """Draws of all coefficients as reported, from N(β̂, σ²A⁻¹), shape (count, P)."""
+    if isinstance(count, bool) or not isinstance(count, int) or count < 1:
+        raise ModelError(f"The number of draws is a whole number of at least 1; got {count!r}.")
+    change = estimate.design.reporting()
+    used = np.diag(estimate.covariance) > 0
+    covariance = estimate.covariance[np.ix_(used, used)]
+    # Scaled to a correlation: the columns of a block differ by many orders of magnitude.
+    spread = np.sqrt(np.diag(covariance))
+    values, vectors = scipy.linalg.eigh(covariance / np.outer(spread, spread))
+    root = spread[:, None] * vectors * np.sqrt(np.maximum(values, 0.0))
+    noise = np.random.default_rng(seed).standard_normal((count, int(used.sum())))
+    draws = np.tile(estimate.coefficients, (count, 1))
+    draws[:, used] += noise @ root.T
+    return np.asarray(draws @ change.T, dtype=np.float64)

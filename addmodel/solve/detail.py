@@ -1,0 +1,91 @@
+"""Is there detail enough? Whether the functions kept are all that the data can use.
+
+The user never chooses a number of basis functions, and never gets a wrong one silently: a component
+gets more functions while any of the last tenth of those kept is shrunk by less than 99 %, and while
+the residuals still hold waves finer than those kept.
+"""
+
+from __future__ import annotations
+
+import numpy as np
+import scipy.stats
+
+from addmodel.spaces.base import FloatArray, Penalised
+
+CEILING = 800
+"""More functions than this are kept only when the formula says detail="all"."""
+SHRUNK = 0.99
+GROWTH = 1.5
+FASTEST = 4.0
+LEVEL = 0.001
+CELLS = 8192
+
+
+def wanted(
+    space: Penalised,
+    shrinkage: FloatArray,
+    x: FloatArray,
+    residuals: FloatArray,
+    weights: FloatArray,
+    scale: float,
+) -> int:
+    """Number of penalised functions that a space should have; its present one if that is enough.
+
+    Parameters
+    ----------
+    space : Penalised
+        The space as it stands.
+    shrinkage : (size,)
+        λ(A⁻¹)_kk of its functions: 0 is free, 1 is gone; ones where λ is infinite.
+    x, residuals, weights : (n,)
+        Covariate, working residuals and working weights of the rows.
+    scale : float
+        Variance of a residual of weight one.
+    """
+    size = space.size
+    most = min(space.most, CEILING)
+    if size >= most:
+        return size
+    least = float(shrinkage[-max(1, size // 10) :].min())
+    if least < SHRUNK:
+        # Shrinkage is λγ/(n + λγ) with γ growing as the fourth power: about as many as are needed.
+        odds = max(least / (1 - least), 1e-9)
+        factor = (SHRUNK / (1 - SHRUNK) / odds) ** 0.25
+        return min(most, int(np.ceil(np.clip(1.1 * factor, GROWTH, FASTEST) * size)))
+    hit = left_over(space, x, residuals, weights, scale)
+    return size if hit is None else min(most, hit)
+
+
+def left_over(
+    space: Penalised, x: FloatArray, residuals: FloatArray, weights: FloatArray, scale: float
+) -> int | None:
+    """End of the first band of waves beyond those kept that stands out of the noise, or None.
+
+    The residuals are summed over cells of equal weight along the covariate, Σwr/√Σw in each, which
+    are independent N(0, σ²) when nothing is left over; their orthonormal wave coefficients v are
+    then N(0, σ²) (or less where the fit has already taken part of a wave), and Σv²/σ² over the
+    bands K..1.5K, 1.5K..2.25K, ... is held against chi-square.
+    """
+    t = space.scaled(x)
+    cells = min(space.distinct, CELLS)
+    order = np.argsort(t, kind="stable")
+    heaviness = weights[order]
+    middle = (np.cumsum(heaviness) - heaviness / 2) / heaviness.sum()
+    # Rows with the same t belong into one cell, the one where the middle of their weight lies.
+    starts = np.flatnonzero(np.diff(t[order], prepend=-np.inf) > 0)
+    group = np.repeat(np.arange(len(starts)), np.diff(np.append(starts, len(t))))
+    centre = np.bincount(group, middle * heaviness) / np.bincount(group, heaviness)
+    cell = np.minimum((centre[group] * cells).astype(np.int64), cells - 1)
+    sums = np.bincount(cell, heaviness * residuals[order], minlength=cells)
+    mass = np.bincount(cell, heaviness, minlength=cells)
+    values = np.divide(sums, np.sqrt(mass), out=np.zeros(cells), where=mass > 0)
+    squares = space.waves(values) ** 2 / scale
+    edges = [space.size]
+    while edges[-1] < len(squares):
+        edges.append(int(np.ceil(GROWTH * edges[-1])))
+    bands = list(zip(edges[:-1], edges[1:], strict=True))
+    for start, stop in bands:
+        band = squares[start:stop]
+        if len(band) and scipy.stats.chi2.sf(band.sum(), len(band)) < LEVEL / len(bands):
+            return stop
+    return None

@@ -1,0 +1,209 @@
+"""The summary: what was fitted, how it went, and what to mind. Data first, text after."""
+
+from __future__ import annotations
+
+import textwrap
+from dataclasses import dataclass
+
+import numpy as np
+import pandas as pd
+
+from addmodel.estimate import Estimate
+from addmodel.inference import coefficients_table, components_table
+from addmodel.spaces.base import Penalised
+from addmodel.spaces.cycle import Cycle
+from addmodel.spaces.levels import Levels
+from addmodel.spaces.line import Line
+
+WIDTH = 88
+
+
+@dataclass(frozen=True)
+class Summary:
+    """A fit's summary, part by part in the order it is read.
+
+    Attributes
+    ----------
+    how : str
+        How the fit went.
+    words : str
+        The model in words.
+    components, coefficients : pandas.DataFrame
+        The two tables.
+    cautions : tuple of str
+        What the reader should know before using the numbers.
+    recipe : str
+        A call that refits the model.
+    """
+
+    how: str
+    words: str
+    components: pd.DataFrame
+    coefficients: pd.DataFrame
+    cautions: tuple[str, ...]
+    recipe: str
+
+    def __str__(self) -> str:
+        parts = [
+            ("How the fit went", _wrapped(self.how)),
+            ("The model in words", _wrapped(self.words)),
+        ]
+        if len(self.components):
+            parts.append(("Components", _components_text(self.components)))
+        parts.append(("Coefficients", _coefficients_text(self.coefficients)))
+        cautions = "\n".join(_wrapped(c, first="- ") for c in self.cautions)
+        if cautions:
+            parts.append(("Cautions", cautions))
+        parts.append(("To refit this model", textwrap.indent(self.recipe, "  ")))
+        return "\n\n".join(f"{title}\n{body}" for title, body in parts)
+
+    __repr__ = __str__
+
+
+def summarise(estimate: Estimate) -> Summary:
+    """The summary of what was estimated."""
+    return Summary(
+        how=_how(estimate),
+        words=_words(estimate),
+        components=components_table(estimate),
+        coefficients=coefficients_table(estimate),
+        cautions=estimate.cautions,
+        recipe=_recipe(estimate),
+    )
+
+
+def _how(estimate: Estimate) -> str:
+    rows = estimate.reading
+    went = "Settled" if estimate.settled else "NOT SETTLED"
+    left_out = [
+        f"{count:,} with {reason} left out"
+        for count, reason in ((rows.missing, "missing values"), (rows.weightless, "zero weight"))
+        if count
+    ]
+    note = f" ({', '.join(left_out)})" if left_out else ""
+    counted = f", which stand for {estimate.n:,.0f}" if estimate.n != rows.used else ""
+    by = {"reml": "REML", "gcv": "GCV"}[estimate.criterion]
+    value = f"{by} = {estimate.criterion_value:,.3f}"
+    steps = "step" if estimate.steps == 1 else "steps"
+    return (
+        f"{went} in {estimate.steps} {steps}; {rows.used:,} of {rows.read:,} rows used{note}"
+        f"{counted}; smoothness by {by} ({value})."
+    )
+
+
+def _words(estimate: Estimate) -> str:
+    name = estimate.model.outcome.text
+    sentences = [
+        f"{name} is taken as Gaussian about its mean, with standard deviation "
+        f"{np.sqrt(estimate.scale):.4g}."
+    ]
+    terms = [_term_words(estimate, j) for j in range(len(estimate.design.components))]
+    if terms:
+        listed = terms[0] if len(terms) == 1 else ", ".join(terms[:-1]) + " and " + terms[-1]
+        sentences.append(f"The mean is an intercept plus {listed}.")
+    else:
+        sentences.append("The mean is one constant.")
+    reduction = deviance_reduction(estimate)
+    sentences.append(
+        f"The model has {1 + sum_df(estimate):.1f} effective degrees of freedom and takes away "
+        f"{100 * reduction:.1f} % of the null deviance."
+    )
+    bending = [
+        j
+        for j, c in enumerate(estimate.design.components)
+        if isinstance(c.spaces[0], Penalised)
+    ]
+    if bending:
+        unsure = [
+            estimate.design.components[j].name for j in bending if not estimate.detail_confirmed[j]
+        ]
+        sentences.append(
+            "The detail was confirmed: more functions would change nothing."
+            if not unsure
+            else f"The detail of {', '.join(unsure)} is bound by detail=: more functions would be used."
+        )
+    straight = [estimate.design.components[j].name for j in bending if estimate.at_infinity(j)]
+    if straight:
+        verb = "has" if len(straight) == 1 else "have"
+        sentences.append(
+            f"{', '.join(straight)} {verb} no bend left: the smoothing parameter ran to infinity, "
+            "and only the unpenalised part remains."
+        )
+    return " ".join(sentences)
+
+
+def _term_words(estimate: Estimate, j: int) -> str:
+    (space,) = estimate.design.components[j].spaces
+    if isinstance(space, Line):
+        return f"a straight line in {space.key}"
+    if isinstance(space, Levels):
+        return f"the {len(space.labels)} levels of {space.key} (base: {space.labels[space.base]})"
+    if isinstance(space, Cycle):
+        return f"a cycle of {space.key} (period {space.period})"
+    if estimate.at_infinity(j):
+        return f"a curve of {space.key}, which came out straight"
+    return f"a curve of {space.key}"
+
+
+def deviance_reduction(estimate: Estimate) -> float:
+    """The part of the null deviance that the model takes away."""
+    return 1 - estimate.deviance / estimate.null_deviance
+
+
+def sum_df(estimate: Estimate) -> float:
+    """Effective degrees of freedom of all components (the intercept's 1 not counted)."""
+    return float(estimate.column_df[1:].sum())
+
+
+def _recipe(estimate: Estimate) -> str:
+    arguments = [repr(estimate.model.text), "data"]
+    if estimate.criterion != "reml":
+        arguments.append(f'criterion="{estimate.criterion}"')
+    arguments += [f"{name}={value}" for name, value in estimate.arguments.items()]
+    return f"addmodel.fit({', '.join(arguments)})"
+
+
+def _wrapped(text: str, first: str = "") -> str:
+    return textwrap.fill(
+        text, WIDTH, initial_indent="  " + first, subsequent_indent="  " + " " * len(first)
+    )
+
+
+def _components_text(table: pd.DataFrame) -> str:
+    shown = pd.DataFrame(
+        {
+            "effective df": [f"{v:.2f}" for v in table["effective_df"]],
+            "share": [f"{100 * v:.1f} %" if np.isfinite(v) else "" for v in table["share"]],
+            "smoothing": [_smoothing_text(v) for v in table["smoothing"]],
+        },
+        index=list(table.index),
+    )
+    return textwrap.indent(shown.to_string(), "  ")
+
+
+def _smoothing_text(value: float) -> str:
+    if np.isnan(value):
+        return ""
+    return "infinite" if np.isinf(value) else f"{value:.3g}"
+
+
+def _coefficients_text(table: pd.DataFrame) -> str:
+    shown = pd.DataFrame(
+        {
+            "estimate": [f"{v:.5g}" for v in table["estimate"]],
+            "std. error": [f"{v:.3g}" for v in table["std_error"]],
+            "95 % interval": [
+                f"{low:.5g} to {high:.5g}"
+                for low, high in zip(table["lower"], table["upper"], strict=True)
+            ],
+            "p": [_p_text(v) for v in table["p"]],
+        },
+        index=list(table.index),
+    )
+    return textwrap.indent(shown.to_string(), "  ")
+
+
+def _p_text(value: float) -> str:
+    if np.isnan(value):
+        return ""
+    return "< 0.001" if value < 0.001 else f"{value:.3f}"
