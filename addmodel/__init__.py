@@ -8,7 +8,7 @@ from addmodel.errors import AddmodelError, Caution, DataError, FormulaError, Mod
 
 if TYPE_CHECKING:
     from addmodel.effects import Effect
-    from addmodel.fitting import Fit, fit
+    from addmodel.fitting import Fit, fit, load
     from addmodel.summary import Summary
 
 __all__ = [
@@ -21,6 +21,7 @@ __all__ = [
     "ModelError",
     "Summary",
     "fit",
+    "load",
 ]
 
 # Where a public name lives; loaded when it is first asked for, so that `addmodel --help` is quick.
@@ -29,6 +30,7 @@ _HOMES = {
     "Fit": "addmodel.fitting",
     "Summary": "addmodel.summary",
     "fit": "addmodel.fitting",
+    "load": "addmodel.fitting",
 }
 
 

@@ -5,12 +5,13 @@ from __future__ import annotations
 import warnings
 from collections.abc import Sequence
 from dataclasses import dataclass
+from pathlib import Path
 from typing import TYPE_CHECKING, Any, Literal
 
 import numpy as np
 import pandas as pd
 
-from addmodel import figures
+from addmodel import figures, store
 from addmodel.data import read
 from addmodel.effects import Effect, effect
 from addmodel.errors import Caution, ModelError, nearest
@@ -300,6 +301,25 @@ class Fit:
     def draws(self, count: int = 1000, seed: int = DEFAULT_SEED) -> FloatArray:
         """Posterior draws of all coefficients, shape (count, P), in the order of `columns`."""
         return posterior_draws(self.estimate, count, seed)
+
+
+    def save(self, path: str | Path) -> None:
+        """Write the fit, without its rows, to a file; its name ends in .addmodel."""
+        target = Path(path)
+        if target.suffix != ".addmodel":
+            raise ModelError(f"A saved fit ends in .addmodel; got '{target.name}'.")
+        store.save(self.estimate, target)
+
+
+def load(path: str | Path) -> Fit:
+    """Read a fit that `Fit.save` wrote; it gives the same predictions, bit for bit.
+
+    Raises
+    ------
+    DataError
+        If the file is missing, not a saved fit, damaged, or of a newer format. No code in it is run.
+    """
+    return Fit(store.load(Path(path)))
 
 
 _ROWLESS = (

@@ -1,0 +1,133 @@
+"""Saved fits: one zip file of JSON and plain arrays, with a format version. Loading runs no code.
+
+What is saved is what was estimated. The rows are not: a saved fit predicts, tells its tables and
+draws its effects, and holds no data of the persons or places behind it but summaries.
+"""
+
+from __future__ import annotations
+
+import dataclasses
+import io
+import json
+import zipfile
+from collections.abc import Mapping
+from pathlib import Path
+from types import MappingProxyType
+from typing import Any
+
+import numpy as np
+
+from addmodel.component import Component, Design, Spread
+from addmodel.data import Column
+from addmodel.errors import DataError
+from addmodel.estimate import Estimate, Reading
+from addmodel.files import replacing
+from addmodel.formula import Model, parse
+from addmodel.outcomes import Outcome, outcome_named
+from addmodel.spaces.curve import Curve
+from addmodel.spaces.cycle import Cycle
+from addmodel.spaces.levels import Levels
+from addmodel.spaces.line import Line
+
+VERSION = 1
+KINDS: dict[str, type[Any]] = {
+    kind.__name__: kind
+    for kind in (Column, Component, Curve, Cycle, Design, Estimate, Levels, Line, Reading, Spread)
+}
+EPOCH = (1980, 1, 1, 0, 0, 0)  # the same fit gives the same bytes
+
+
+def save(estimate: Estimate, path: Path) -> None:
+    """Write an estimate, without its rows, to `path`."""
+    bare = dataclasses.replace(estimate, table=None, linear_predictor=None)
+    arrays: list[np.ndarray[Any, Any]] = []
+    body = {"format": "addmodel fit", "version": VERSION, "estimate": _encoded(bare, arrays)}
+    with replacing(path) as temporary, zipfile.ZipFile(temporary, "w") as archive:
+        _add(archive, "fit.json", json.dumps(body, allow_nan=False, indent=1).encode())
+        for number, array in enumerate(arrays):
+            buffer = io.BytesIO()
+            np.lib.format.write_array(buffer, array, allow_pickle=False)
+            _add(archive, f"arrays/{number}.npy", buffer.getvalue())
+
+
+def load(path: Path) -> Estimate:
+    """Read an estimate that `save` wrote.
+
+    Raises
+    ------
+    DataError
+        If the file is missing, not a saved fit, damaged, or of a newer format.
+    """
+    if not path.is_file():
+        raise DataError(f"There is no file {path}.")
+    try:
+        with zipfile.ZipFile(path) as archive:
+            body = json.loads(archive.read("fit.json"))
+            if not isinstance(body, dict) or body.get("format") != "addmodel fit":
+                raise DataError(f"{path} is not a saved fit.")
+            if body.get("version") != VERSION:
+                raise DataError(
+                    f"{path} has format version {body.get('version')}; this addmodel reads version "
+                    f"{VERSION}. Use the version of addmodel that wrote it, or fit again."
+                )
+            found = _decoded(body["estimate"], archive)
+    except (zipfile.BadZipFile, KeyError, TypeError, ValueError, EOFError, RecursionError) as error:
+        if isinstance(error, DataError):
+            raise
+        raise DataError(f"{path} is not a saved fit, or it is damaged. Fit again.") from error
+    if not isinstance(found, Estimate):
+        raise DataError(f"{path} is not a saved fit, or it is damaged. Fit again.")
+    return found
+
+
+def _add(archive: zipfile.ZipFile, name: str, content: bytes) -> None:
+    entry = zipfile.ZipInfo(name, date_time=EPOCH)
+    entry.compress_type = zipfile.ZIP_DEFLATED
+    archive.writestr(entry, content)
+
+
+def _encoded(value: Any, arrays: list[np.ndarray[Any, Any]]) -> Any:
+    if isinstance(value, Model):
+        return {"formula": value.text}
+    if isinstance(value, Outcome):
+        return {"outcome": value.name}
+    if dataclasses.is_dataclass(value):
+        fields = {
+            f.name: _encoded(getattr(value, f.name), arrays) for f in dataclasses.fields(value)
+        }
+        return {"kind": type(value).__name__, "fields": fields}
+    if isinstance(value, np.ndarray):
+        arrays.append(value)
+        return {"array": len(arrays) - 1}
+    if isinstance(value, Mapping):
+        return {"map": [[k, _encoded(v, arrays)] for k, v in value.items()]}
+    if isinstance(value, tuple | list):
+        return [_encoded(v, arrays) for v in value]
+    if isinstance(value, float | np.floating):
+        # Written in hexadecimal: bit for bit, infinities included.
+        return {"float": float(value).hex()}
+    if isinstance(value, np.integer):
+        return int(value)
+    return value
+
+
+def _decoded(value: Any, archive: zipfile.ZipFile) -> Any:
+    if isinstance(value, list):
+        return tuple(_decoded(v, archive) for v in value)
+    if not isinstance(value, dict):
+        return value
+    if "formula" in value:
+        return parse(value["formula"])
+    if "outcome" in value:
+        return outcome_named(value["outcome"])
+    if "array" in value:
+        content = io.BytesIO(archive.read(f"arrays/{int(value['array'])}.npy"))
+        array = np.lib.format.read_array(content, allow_pickle=False)
+        array.setflags(write=False)
+        return array
+    if "map" in value:
+        return MappingProxyType({k: _decoded(v, archive) for k, v in value["map"]})
+    if "float" in value:
+        return float.fromhex(value["float"])
+    kind = KINDS[value["kind"]]
+    return kind(**{name: _decoded(v, archive) for name, v in value["fields"].items()})
