@@ -17,7 +17,8 @@ import numpy.typing as npt
 import pandas as pd
 
 from addmodel.errors import DataError, FormulaError, nearest
-from addmodel.formula import Expression, Factor, Model, parse_expression
+from addmodel.expression import Expression, parse_expression
+from addmodel.formula import Factor, Model
 from addmodel.frames import (
     BoolArray,
     Source,

@@ -143,15 +143,15 @@ def _estimate(
     _check_outcome(table)
     progress("laying the components on the data")
     design = Design.lay(model, table)
-    log_weights = float(table.counts @ np.log(table.weights))
     confirmed = [False] * len(design.components)
     steps = 0
     for turn in range(ROUNDS):
         progress(f"choosing smoothness ({sum(design.block_sizes)} functions)")
-        rows, smoothness = _solve(design, table, weights, outcome, criterion, log_weights)
+        laid = Laid.on(design, table, outcome)
+        smoothness = laid.smoothness(criterion)
         steps += smoothness.steps
         point = smoothness.point
-        eta = rows.linear_predictor(point.coefficients())
+        eta = laid.rows.linear_predictor(point.coefficients())
         sizes, confirmed = _sizes(
             design, smoothness, table, table.outcome - eta, weights, criterion.scale(point)
         )
@@ -172,7 +172,7 @@ def _estimate(
         scale=scale,
         deviance=point.deviance,
         null_deviance=_null_deviance(table, weights),
-        log_likelihood=_log_likelihood(point.deviance, problem.n, log_weights),
+        log_likelihood=_log_likelihood(point.deviance, problem.n, problem.log_weights),
         criterion_value=criterion.reported(point),
         n=problem.n,
         reading=Reading(table.n_read, table.n_missing, table.n_weightless, len(table.rows)),
@@ -187,43 +187,59 @@ def _estimate(
     )
 
 
-def _solve(
-    design: Design,
-    table: Table,
-    weights: FloatArray,
-    outcome: Outcome,
-    criterion: Criterion,
-    log_weights: float,
-) -> tuple[DenseRows, Smoothness]:
-    """Sum the rows and choose smoothness; then once more from sums about the solution."""
-    n = float(table.counts.sum())
-    values = {key: column.values for key, column in table.columns.items()}
-    columns = design.matrix(values, len(weights))
-    p = design.p
-    r = np.linalg.qr(columns[:, :p] * np.sqrt(table.counts)[:, None], mode="r")
-    log_det_design = 2 * float(np.log(np.abs(np.diag(r))).sum())
-    rows = DenseRows(columns, table.outcome, weights, table.offset)
-    # Starting at the mean keeps the digits of a large constant out of the sums of squares.
-    start = np.zeros(columns.shape[1])
-    start[0] = np.average(table.outcome - table.offset, weights=weights)
+@dataclass(frozen=True)
+class Laid:
+    """A design laid on rows: gives the penalised problem about any coefficients."""
 
-    def problem_at(coefficients: FloatArray) -> Problem:
-        return Problem.of(
-            rows.sweep(coefficients, outcome),
-            p,
-            design.block_sizes,
-            log_det_design=log_det_design,
-            log_weights=log_weights,
-            n=n,
+    design: Design
+    rows: DenseRows
+    outcome: Outcome
+    start: FloatArray  # (P,)
+    log_det_design: float
+    log_weights: float
+    n: float
+
+    @classmethod
+    def on(cls, design: Design, table: Table, outcome: Outcome) -> Laid:
+        """The design's columns at the rows of the table."""
+        weights = table.weights * table.counts
+        values = {key: column.values for key, column in table.columns.items()}
+        columns = design.matrix(values, len(weights))
+        plain = columns[:, : design.p] * np.sqrt(table.counts)[:, None]
+        diagonal = np.diag(np.linalg.qr(plain, mode="r"))
+        # Starting at the mean keeps the digits of a large constant out of the sums of squares.
+        start = np.zeros(columns.shape[1])
+        start[0] = np.average(table.outcome - table.offset, weights=weights)
+        return cls(
+            design=design,
+            rows=DenseRows(columns, table.outcome, weights, table.offset),
+            outcome=outcome,
+            start=start,
+            log_det_design=2 * float(np.log(np.abs(diagonal)).sum()),
+            log_weights=float(table.counts @ np.log(table.weights)),
+            n=float(table.counts.sum()),
         )
 
-    owners = [design.components[j] for j in design.block_owners]
-    fixed = [c.smoothing for c in owners]
-    degrees = [None if c.df is None else c.df - len(c.own) for c in owners]
-    first = choose(problem_at(start), criterion, fixed, degrees)
-    free = [f is None and d is None for f, d in zip(fixed, degrees, strict=True)]
-    again = problem_at(first.point.coefficients())
-    return rows, newton_from(first, again, criterion, free)
+    def problem(self, coefficients: FloatArray) -> Problem:
+        """The penalised quadratic about the coefficients (P,)."""
+        return Problem.of(
+            self.rows.sweep(coefficients, self.outcome),
+            self.design.p,
+            self.design.block_sizes,
+            log_det_design=self.log_det_design,
+            log_weights=self.log_weights,
+            n=self.n,
+        )
+
+    def smoothness(self, criterion: Criterion) -> Smoothness:
+        """Choose smoothness; then go on from sums taken anew about the solution."""
+        owners = [self.design.components[j] for j in self.design.block_owners]
+        fixed = [c.smoothing for c in owners]
+        degrees = [None if c.df is None else c.df - len(c.own) for c in owners]
+        first = choose(self.problem(self.start), criterion, fixed, degrees)
+        free = [f is None and d is None for f, d in zip(fixed, degrees, strict=True)]
+        again = self.problem(first.point.coefficients())
+        return newton_from(first, again, criterion, free)
 
 
 def _sizes(

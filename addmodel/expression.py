@@ -142,7 +142,7 @@ def parse_expression(text: str, role: str) -> Expression:
         If it is not an expression of columns; the message marks the place in `text`.
     """
     source = SourceText.of(text, role)
-    return read_expression(source, read_tree(source, 0, len(text)))
+    return source.expression(source.tree(0, len(text)))
 
 
 # Reading ---------------------------------------------------------------------------------------
@@ -175,18 +175,76 @@ class SourceText:
         lead = "" if self.role == "formula" else f"{self.role}: "
         return FormulaError(lead + message, self.text, span)
 
+    def closing(self, start: int) -> int:
+        """One after the bracket that closes the one at `start`."""
+        depth = 0
+        for match in _OPAQUE.finditer(self.text, start):
+            depth += (match[0] in "([{") - (match[0] in ")]}")
+            if depth == 0:
+                return match.end()
+        raise self.error("This bracket is never closed.", (start, start + 1))
 
-def closing(source: SourceText, start: int) -> int:
-    """One after the bracket that closes the one at `start`."""
-    depth = 0
-    for match in _OPAQUE.finditer(source.text, start):
-        depth += (match[0] in "([{") - (match[0] in ")]}")
-        if depth == 0:
-            return match.end()
-    raise source.error("This bracket is never closed.", (start, start + 1))
+    def tree(self, start: int, stop: int) -> ast.expr:
+        """Python's tree of a piece.
+
+        Offsets count characters of the whole text. Names are as written there (Python would turn µ
+        into another letter), in backticks where they need them.
+        """
+        piece = self.text[start:stop]
+        start += len(piece) - len(piece.lstrip())
+        piece = piece.strip()
+        span = (start, start + len(piece)) if piece else (start - 1, stop + 1)
+        depth = 0
+
+        def plain(match: re.Match[str]) -> str:
+            nonlocal depth
+            text = match[0]
+            depth += (text in "([{") - (text in ")]}")
+            if text == "#" or depth > DEEPEST:
+                what = "# has no meaning here." if text == "#" else "The brackets nest too deep."
+                raise self.error(what, (start + match.start(), start + match.end()))
+            return "_" * len(text) if text[0] == "`" else " " if text.isspace() else text
+
+        code = _OPAQUE.sub(plain, piece)
+        if piece.isidentifier():  # Python's own words too: a column may well be called class
+            tree: ast.expr = ast.Name("_", col_offset=0, end_col_offset=len(code.encode()))
+        else:
+            try:
+                with warnings.catch_warnings():
+                    warnings.simplefilter("ignore")  # about code that will be refused below
+                    tree = ast.parse(code, mode="eval").body
+            except (SyntaxError, RecursionError, MemoryError) as error:
+                words = [w for w in re.findall(r"\w+", code) if keyword.iskeyword(w)]
+                hint = "".join(
+                    f" A column called {w} stands in backticks: `{w}`." for w in words[:1]
+                )
+                reason = getattr(error, "msg", None) or "too deep, or not text Python can read"
+                raise self.error(f"This cannot be read: {reason}.{hint}", span) from error
+        encoded = code.encode()
+        for node in ast.walk(tree):
+            if isinstance(node, ast.expr | ast.keyword):
+                first, last = (start + len(encoded[:at].decode()) for at in span_of(node))
+                node.col_offset, node.end_col_offset = first, last
+            if isinstance(node, ast.Name):
+                name = self.cut(span_of(node))
+                if not re.fullmatch("`[^`]+`|[^`]+", name):
+                    raise self.error("A name in backticks is empty or misplaced.", span_of(node))
+                if name.startswith("__"):
+                    raise self.error(f"{name} is not a name that a formula can use.", span_of(node))
+                node.id = _quoted(name.strip("`"))
+        return tree
+
+    def expression(self, node: ast.expr) -> Expression:
+        """A tree, or a part of one, found to be an expression."""
+        names = tuple(dict.fromkeys(_check(self, node, 0)))
+        if not names:
+            raise self.error("No column is named here.", span_of(node))
+        text = names[0] if isinstance(node, ast.Name) else ast.unparse(node)
+        return Expression(text, names, span_of(node), node)
 
 
-def place(node: ast.expr | ast.keyword) -> tuple[int, int]:
+def span_of(node: ast.expr | ast.keyword) -> tuple[int, int]:
+    """The place of a node in the text it was read from."""
     return node.col_offset, node.end_col_offset or node.col_offset
 
 
@@ -195,64 +253,10 @@ def _quoted(name: str) -> str:
     return name if plain and not keyword.iskeyword(name) else f"`{name}`"
 
 
-def read_tree(source: SourceText, start: int, stop: int) -> ast.expr:
-    """Python's tree of a piece: offsets count characters of the whole text, names are as written
-    there (Python would turn µ into another letter), in backticks where they need them."""
-    piece = source.text[start:stop]
-    start += len(piece) - len(piece.lstrip())
-    piece = piece.strip()
-    span = (start, start + len(piece)) if piece else (start - 1, stop + 1)
-    depth = 0
-
-    def plain(match: re.Match[str]) -> str:
-        nonlocal depth
-        text = match[0]
-        depth += (text in "([{") - (text in ")]}")
-        if text == "#" or depth > DEEPEST:
-            what = "# has no meaning here." if text == "#" else "The brackets nest too deep."
-            raise source.error(what, (start + match.start(), start + match.end()))
-        return "_" * len(text) if text[0] == "`" else " " if text.isspace() else text
-
-    code = _OPAQUE.sub(plain, piece)
-    if piece.isidentifier():  # Python's own words too: a column may well be called class
-        tree: ast.expr = ast.Name("_", col_offset=0, end_col_offset=len(code.encode()))
-    else:
-        try:
-            with warnings.catch_warnings():
-                warnings.simplefilter("ignore")  # about code that will be refused below
-                tree = ast.parse(code, mode="eval").body
-        except (SyntaxError, RecursionError, MemoryError) as error:
-            words = [w for w in re.findall(r"\w+", code) if keyword.iskeyword(w)]
-            hint = "".join(f" A column called {w} stands in backticks: `{w}`." for w in words[:1])
-            reason = getattr(error, "msg", None) or "too deep, or not text Python can read"
-            raise source.error(f"This cannot be read: {reason}.{hint}", span) from error
-    encoded = code.encode()
-    for node in ast.walk(tree):
-        if isinstance(node, ast.expr | ast.keyword):
-            first, last = (start + len(encoded[:at].decode()) for at in place(node))
-            node.col_offset, node.end_col_offset = first, last
-        if isinstance(node, ast.Name):
-            name = source.cut(place(node))
-            if not re.fullmatch("`[^`]+`|[^`]+", name):
-                raise source.error("A name in backticks is empty or misplaced.", place(node))
-            if name.startswith("__"):
-                raise source.error(f"{name} is not a name that a formula can use.", place(node))
-            node.id = _quoted(name.strip("`"))
-    return tree
-
-
-def read_expression(source: SourceText, node: ast.expr) -> Expression:
-    names = tuple(dict.fromkeys(_check(source, node, 0)))
-    if not names:
-        raise source.error("No column is named here.", place(node))
-    text = names[0] if isinstance(node, ast.Name) else ast.unparse(node)
-    return Expression(text, names, place(node), node)
-
-
 def _check(source: SourceText, node: ast.expr, depth: int) -> list[str]:
     """Refuse everything that is not on the list; return the columns in order."""
     if depth > DEEPEST:
-        raise source.error("The expression nests too deep.", place(node))
+        raise source.error("The expression nests too deep.", span_of(node))
     parts: list[ast.expr] = []
     match node:
         case ast.Name():
@@ -269,27 +273,28 @@ def _check(source: SourceText, node: ast.expr, depth: int) -> list[str]:
             _check_call(source, node, name)
             parts = node.args
         case ast.Call(func=ast.Attribute() as called):
-            raise source.error(_NO_CALL.format(source.cut(place(called))), place(node))
+            raise source.error(_NO_CALL.format(source.cut(span_of(called))), span_of(node))
         case ast.Attribute():
             raise source.error(
                 f"A dot has no meaning here. A column with a dot in its name stands in "
                 f"backticks, as in `a.b`. {_ALLOWED}",
-                place(node),
+                span_of(node),
             )
         case _:
-            raise source.error(f"This is not allowed in an expression. {_ALLOWED}", place(node))
+            raise source.error(f"This is not allowed in an expression. {_ALLOWED}", span_of(node))
     return [name for part in parts for name in _check(source, part, depth + 1)]
 
 
 def _check_call(source: SourceText, node: ast.Call, name: str) -> None:
     if name in _TERMS:
-        raise source.error(f"{name}() is a term and cannot be part of an expression.", place(node))
+        message = f"{name}() is a term and cannot be part of an expression."
+        raise source.error(message, span_of(node))
     if name not in _FUNCTIONS:
-        raise source.error(_NO_CALL.format(name), place(node))
+        raise source.error(_NO_CALL.format(name), span_of(node))
     wanted = _FUNCTIONS[name].nin
     if node.keywords or len(node.args) != wanted:
         number = "one value" if wanted == 1 else "two values"
-        raise source.error(f"{name}() takes {number} and no options.", place(node))
+        raise source.error(f"{name}() takes {number} and no options.", span_of(node))
 
 
 def _compute(node: ast.expr, columns: Mapping[str, np.ndarray[Any, Any]]) -> Any:

@@ -1,76 +1,60 @@
-"""Formulas: text in, an outcome and a sum of terms out. Nothing here sees data until `evaluate`.
+"""Formulas: text in, an outcome and a sum of terms out. Nothing here sees data.
 
-formulaic works out the Wilkinson–Rogers algebra. What stands between its operators is read here:
-by Python's `ast`, against a list of what is allowed, and computed by a walk over the checked tree.
-No text is ever run as code.
+formulaic works out the Wilkinson–Rogers algebra; what stands between its operators is read here.
 """
 
 from __future__ import annotations
 
 import ast
-import keyword
 import math
 import re
-import warnings
 from collections import Counter
 from collections.abc import Callable, Mapping, Sequence
 from dataclasses import dataclass, field
 from types import MappingProxyType
 from typing import Any, Literal, NamedTuple
 
-import numpy as np
-import pandas as pd
 from formulaic.errors import FormulaicError
 from formulaic.parser import DefaultFormulaParser
 from formulaic.parser.types import ASTNode
 
-from .errors import DataError, FormulaError, nearest
+from .errors import FormulaError, nearest
+from .expression import DEEPEST, NAME, Expression, SourceText, span_of
 
 Option = float | int | str
 Kind = Literal["plain", "levels", "curve", "cycle"]
 
-_LONGEST = 10_000  # characters
-_DEEPEST = 50  # nested brackets or operations, far below Python's recursion limit
 _MOST_TERMS, _MOST_FACTORS = 1_000, 20
+_BRACES = "Arithmetic stands in braces, as in {}."
+_INTERCEPT = "The intercept always stays in the model: leave out 0 and - 1."
+
 
 class _Rule(NamedTuple):
-    holds: Callable[[Option], bool]
     words: str
-    convert: Callable[[Any], Option] = float
+    holds: Callable[[Option], bool]  # of finite numbers and texts
+    convert: Callable[[Any], Option] = float  # of numbers
 
 
-def _above(bound: float) -> Callable[[Option], bool]:
-    return lambda value: not isinstance(value, str) and bound < value < math.inf
+def _above(bound: float, *texts: str) -> Callable[[Option], bool]:
+    return lambda v: v in texts if isinstance(v, str) else v > bound
 
 
 _DETAIL = _Rule(
-    lambda v: v == "all" or (not isinstance(v, str) and 1 <= v < math.inf and v == int(v)),
     'a whole number of at least 1, or "all"',
-    lambda v: v if isinstance(v, str) else int(v),
+    lambda v: v == "all" if isinstance(v, str) else 1 <= v == int(v),
+    int,
 )
-_SMOOTHING = _Rule(_above(0), "a positive number")
-_PERIODS = ("year", "month", "week", "day")
+_SMOOTHING = _Rule("a positive number", _above(0))
 _PERIOD = _Rule(
-    lambda v: v in _PERIODS if isinstance(v, str) else 0 < v < math.inf,
     'a positive number, in the units of the column, or "year", "month", "week" or "day"',
-    lambda v: v if isinstance(v, str) else float(v),
+    _above(0, "year", "month", "week", "day"),
 )
-_BASE = _Rule(
-    lambda v: isinstance(v, str) or math.isfinite(v), 'a level, or "largest"', lambda v: v
-)
+_BASE = _Rule('a level, or "largest"', lambda v: True, lambda v: v)
+_TUNING = {"detail": _DETAIL, "smoothing": _SMOOTHING}
 
 _CALLS: dict[str, tuple[Kind, dict[str, _Rule]]] = {
-    "curve": (
-        "curve",
-        {"detail": _DETAIL, "smoothing": _SMOOTHING, "df": _Rule(_above(1), "a number above 1")},
-    ),
-    "cycle": (
-        "cycle",
-        {
-            **{"period": _PERIOD, "detail": _DETAIL, "smoothing": _SMOOTHING},
-            "df": _Rule(_above(0), "a positive number"),
-        },
-    ),
+    "curve": ("curve", {**_TUNING, "df": _Rule("a number above 1", _above(1))}),
+    "cycle": ("cycle", {"period": _PERIOD, **_TUNING, "df": _SMOOTHING}),
     "C": ("levels", {"base": _BASE}),
 }
 # These change what a term means, not only how closely it is fitted: they are part of its name.
@@ -141,35 +125,33 @@ def parse(text: str) -> Model:
     FormulaError
         Whenever the formula cannot be read; the message marks the place.
     """
-    source = _Source.of(text, "formula")
+    source = SourceText.of(text, "formula")
     pieces = _scan(source)
-    tildes = [i for i, piece in enumerate(pieces) if source.cut(piece) == "~"]
+    tildes = [i for i, piece in enumerate(pieces) if piece.text == "~"]
     if len(tildes) != 1:
-        place = pieces[tildes[1]][1:] if tildes else None
         raise source.error(
-            "A formula has one ~, between the outcome and the terms, as in y ~ x + curve(z).", place
+            "A formula has one ~, between the outcome and the terms, as in y ~ x + curve(z).",
+            pieces[tildes[1]].span if tildes else None,
         )
-    left, right = pieces[: tildes[0]], pieces[tildes[0] + 1 :]
+    left, tilde, right = pieces[: tildes[0]], pieces[tildes[0]], pieces[tildes[0] + 1 :]
     if not left or not right:
-        what = "the outcome before" if not left else "the terms after"
-        none = "" if not left else " For a model of the intercept alone write y ~ 1."
-        raise source.error(f"Nothing stands for {what} the ~.{none}", pieces[tildes[0]][1:])
-    whole = (left[0][1], left[-1][2])
-    if len(left) > 1 or left[0][0] not in _OPERANDS:
-        raise source.error(
-            "The outcome is one column or one expression. Arithmetic stands in braces, "
-            "as in {cases / people} ~ x.",
-            whole,
+        what = "terms after the ~. For a model of the intercept alone write y ~ 1."
+        what = what if left else "outcome before the ~."
+        raise source.error(f"Nothing stands for the {what}", tilde.span)
+    whole = (left[0].span[0], left[-1].span[1])
+    if len(left) > 1 or left[0].kind not in _OPERANDS:
+        message = (
+            f"The outcome is one column or one expression. {_BRACES.format('{cases / people} ~ x')}"
         )
+        raise source.error(message, whole)
     outcome = _factor(source, left[0], strict=True)
     if outcome.kind != "plain":
         raise source.error("The outcome is a column or an expression, not a term.", whole)
     terms = _terms(source, right, strict=True)
     for term in terms:
         if len(term.factors) > 1:
-            raise source.error(
-                f"{term.name}: products of terms are not available yet in this version.", term.span
-            )
+            message = f"{term.name}: products of terms are not available yet in this version."
+            raise source.error(message, term.span)
     return Model(text, outcome.arguments[0], terms)
 
 
@@ -197,12 +179,10 @@ def find(text: str, names: Sequence[str]) -> str:
     """
     if text in names:
         return text
-    typed = _lone_term(text)
-    known = {name: term for name in names if (term := _lone_term(name)) is not None}
+    typed, known = _lone_term(text), [(name, _lone_term(name)) for name in names]
     fits: list[str] = []
     for leniency in range(3):
-        if typed is not None and not fits:
-            fits = [name for name, term in known.items() if _fits(typed, term, leniency)]
+        fits = fits or [n for n, term in known if typed and term and _fits(typed, term, leniency)]
     if len(fits) == 1:
         return fits[0]
     if fits:
@@ -212,15 +192,13 @@ def find(text: str, names: Sequence[str]) -> str:
 
 def _lone_term(text: str) -> Term | None:
     try:
-        source = _Source.of(text, "term")
+        source = SourceText.of(text, "term")
         pieces = _scan(source)
-        if any(source.cut(piece) == "~" for piece in pieces):
-            return None
-        terms = _terms(source, pieces, strict=False)
+        terms = () if any(p.text == "~" for p in pieces) else _terms(source, pieces, strict=False)
     except FormulaError:
         # a lone column with a space in its name, typed without the backticks
-        quoted = isinstance(text, str) and re.fullmatch(r"[\w .]+", text) and f"`{text}`"
-        return _lone_term(quoted) if quoted else None
+        bare = isinstance(text, str) and re.fullmatch(r"[\w .]+", text)
+        return _lone_term(f"`{text}`") if bare else None
     return terms[0] if len(terms) == 1 else None
 
 
@@ -228,9 +206,9 @@ def _fits(typed: Term, known: Term, leniency: int) -> bool:
     """Whether the names agree; or (1) all but naming options left out; or (2) the call too."""
 
     def fits(t: Factor, k: Factor) -> bool:
-        alike = t.arguments == k.arguments and not any(key in _NAMING for key in t.options)
-        like = alike and leniency >= 1 and t.kind == k.kind
-        return t.name == k.name or like or (alike and leniency == 2 and t.kind == "plain")
+        alike = t.arguments == k.arguments and t.options.keys().isdisjoint(_NAMING)
+        kinds = (k.kind, "plain")[:leniency]
+        return t.name == k.name or (alike and t.kind in kinds)
 
     return len(typed.factors) == len(known.factors) and all(
         any(fits(t, k) for k in known.factors) for t in typed.factors
@@ -239,90 +217,80 @@ def _fits(typed: Term, known: Term, leniency: int) -> bool:
 
 # Reading ---------------------------------------------------------------------------------------
 
-_Piece = tuple[str, int, int]  # kind, first character, one after the last
+
+class _Piece(NamedTuple):
+    kind: str  # a group of _PIECE
+    text: str
+    span: tuple[int, int]
+
+
 _OPERANDS = ("quoted", "brace", "name")
-_STRING = r"'(?:\\.|[^'\\])*'|\"(?:\\.|[^\"\\])*\""
-# \w leaves out the marks that go with letters of many scripts; what else comes in, Python refuses
-_NAME = r"[^\W\d](?:\w|[^\x00-\x7f\s])*"
-_OPAQUE = re.compile(rf"{_STRING}|`[^`]*`|\s|#|[(\[{{]|[)\]}}]")
 _PIECE = re.compile(
-    rf"(?P<quoted>`[^`]+`)|(?P<brace>\{{)|(?P<name>{_NAME})"
+    rf"(?P<quoted>`[^`]+`)|(?P<brace>\{{)|(?P<name>{NAME})"
     r"|(?P<number>\.?\d[\w.]*)|(?P<operator>\*\*|[-+*/:~()])"
 )
 _TRAILER = re.compile(r"\s*[(\[]|\.\w+")
+_DOT = "The dot for 'all other columns' is not available. Name the columns."
+_NO_MEANING = (
+    "has no meaning here. Terms are joined by + - : * / ** and parentheses; arithmetic and "
+    "comparisons stand in braces, as in {x / 2}, and a column with an odd name in backticks, "
+    "as in `body mass`."
+)
 
 
-def _scan(source: _Source) -> list[_Piece]:
+def _scan(source: SourceText) -> list[_Piece]:
     """Cut a formula into what stands between the operators, and the operators."""
     text, at, depth = source.text, 0, 0
-    pieces: list[_Piece] = []
+    pieces = [_Piece("operator", "~", (0, 0))]  # as if one stood before, for the first to follow
     while at < len(text):
         if text[at].isspace():
             at += 1
             continue
         match = _PIECE.match(text, at)
-        if match is None or match.lastgroup is None:
-            raise source.error(_no_meaning(text[at]), (at, at + 1))
-        kind, stop = match.lastgroup, match.end()
+        if match is None:
+            message = _DOT if text[at] == "." else f"{text[at]} {_NO_MEANING}"
+            raise source.error(message, (at, at + 1))
+        kind, stop = str(match.lastgroup), match.end()
         if kind == "brace":
-            stop = _close(source, at)
+            stop = source.closing(at)
         while kind == "name" and (more := _TRAILER.match(text, stop)):
-            stop = more.end() if more[0][-1] not in "([" else _close(source, more.end() - 1)
-        piece = (kind, at, stop)
-        before = source.cut(pieces[-1]) if pieces else "~"
-        if kind == "operator":
-            depth += (text[at] == "(") - (text[at] == ")")
-            if depth > _DEEPEST:
-                raise source.error(f"More than {_DEEPEST} brackets stand in each other.", piece[1:])
-        if (kind != "operator" or text[at] == "(") and (
-            before == ")" or (pieces and pieces[-1][0] != "operator")
-        ):
-            raise source.error(
-                f"An operator such as + is missing between {before} and {source.cut(piece)}.",
-                (pieces[-1][1], stop),
-            )
-        _check_operand(source, pieces, piece)
+            stop = more.end() if more[0][-1] not in "([" else source.closing(more.end() - 1)
+        piece = _Piece(kind, text[at:stop], (at, stop))
+        depth += (piece.text == "(") - (piece.text == ")")
+        if depth > DEEPEST:
+            raise source.error(f"More than {DEEPEST} brackets stand in each other.", piece.span)
+        _check_pair(source, pieces[-1], piece)
         pieces.append(piece)
         at = stop
-    return pieces
+    return pieces[1:]
 
 
-def _no_meaning(character: str) -> str:
-    if character == ".":
-        return "The dot for 'all other columns' is not available. Name the columns."
-    return (
-        f"{character} has no meaning here. Terms are joined by + - : * / ** and parentheses; "
-        "arithmetic and comparisons stand in braces, as in {x / 2}, and a column with an odd name "
-        "in backticks, as in `body mass`."
-    )
+def _check_pair(source: SourceText, last: _Piece, here: _Piece) -> None:
+    """A missing operator, and what the algebra would silently take for other than arithmetic."""
+    message, span = "", here.span
+    both = (last.span[0], here.span[1])
+    starts, ends = here.kind != "operator" or here.text == "(", last.kind != "operator"
+    if starts and (ends or last.text == ")"):
+        message = f"An operator such as + is missing between {last.text} and {here.text}."
+        span = both
+    elif last.text == "**":
+        if not re.fullmatch(r"[1-9]\d?", here.text):
+            message = "The power of a sum of terms is a whole number from 1 to 99."
+    elif here.text == "**" and last.kind in _OPERANDS:
+        power = _BRACES.format(f"{{{last.text.strip('{}')} ** 2}}")
+        message, span = f"A term to a power is the term itself. {power}", both
+    elif here.text == "0" or (here.text == "1" and last.text == "-"):
+        message = _INTERCEPT
+    elif here.kind == "number" and (here.text != "1" or last.text in (":", "*", "/")):
+        message = f"{here.text} cannot be a term or part of a product. {_BRACES.format('{x / 2}')}"
+    elif last.text == "1" and here.text in (":", "*", "/", "**"):
+        message = f"1 is the intercept, not part of a product. {_BRACES.format('{x / 2}')}"
+        span = last.span
+    if message:
+        raise source.error(message, span)
 
 
-def _check_operand(source: _Source, pieces: Sequence[_Piece], piece: _Piece) -> None:
-    """Numbers, and what the algebra would take silently in another sense than arithmetic."""
-    here, span = source.cut(piece), piece[1:]
-    before = source.cut(pieces[-1]) if pieces else ""
-    braces = "Arithmetic stands in braces, as in {x / 2}."
-    if before == "**":
-        if piece[0] != "number" or not re.fullmatch(r"[1-9]\d?", here):
-            raise source.error("The power of a sum of terms is a whole number from 1 to 99.", span)
-    elif here == "**" and pieces and pieces[-1][0] in _OPERANDS:
-        bare = before.strip("{}")
-        raise source.error(
-            f"A term to a power is the term itself. {braces[:-9]}{{{bare} ** 2}}.",
-            (pieces[-1][1], piece[2]),
-        )
-    elif here == "0" or (here == "1" and before == "-"):
-        raise source.error(_INTERCEPT, span)
-    elif piece[0] == "number" and (here != "1" or before in (":", "*", "/")):
-        raise source.error(f"{here} cannot be a term or part of a product. {braces}", span)
-    elif before == "1" and here in (":", "*", "/", "**"):
-        raise source.error(f"1 is the intercept, not part of a product. {braces}", pieces[-1][1:])
-
-
-_INTERCEPT = "The intercept always stays in the model: leave out 0 and - 1."
-
-
-def _terms(source: _Source, pieces: Sequence[_Piece], strict: bool) -> tuple[Term, ...]:
+def _terms(source: SourceText, pieces: Sequence[_Piece], strict: bool) -> tuple[Term, ...]:
     """The terms that formulaic's algebra makes of the pieces."""
     # formulaic sees one character for each distinct factor, at the place where the factor stands.
     # So it has no code to look into, its places are those of the text, and what differs for us
@@ -331,12 +299,12 @@ def _terms(source: _Source, pieces: Sequence[_Piece], strict: bool) -> tuple[Ter
     symbols: dict[Factor, str] = {}
     factors: dict[int, Factor] = {}
     for piece in pieces:
-        kind, start, stop = piece
-        if kind in _OPERANDS:
+        start, stop = piece.span
+        if piece.kind in _OPERANDS:
             factor = factors[start] = _factor(source, piece, strict)
             letters[start] = symbols.setdefault(factor, chr(0x4E00 + len(symbols)))
         else:
-            letters[start:stop] = source.text[start:stop]
+            letters[start:stop] = piece.text
     parser = DefaultFormulaParser()
     try:
         tree = parser.get_ast("".join(letters))
@@ -360,7 +328,7 @@ def _terms(source: _Source, pieces: Sequence[_Piece], strict: bool) -> tuple[Ter
     return tuple(terms)
 
 
-def _check_size(source: _Source, tree: Any) -> None:
+def _check_size(source: SourceText, tree: Any) -> None:
     """Refuse an algebra that would never finish, from upper bounds before it is worked out."""
     order, ahead = [], [tree]
     while ahead:
@@ -384,92 +352,71 @@ def _check_size(source: _Source, tree: Any) -> None:
                     power = int(node.args[1].token)  # _scan has seen to it that it is a number
                     n, d = n**power, d * power
         if n > _MOST_TERMS or d > _MOST_FACTORS:
-            raise source.error(
-                f"The formula asks for more than {_MOST_TERMS:,} terms, or for products of more "
-                f"than {_MOST_FACTORS} factors.",
-                None,
-            )
+            most = f"{_MOST_TERMS:,} terms, or for products of more than {_MOST_FACTORS} factors"
+            raise source.error(f"The formula asks for more than {most}.", None)
         sizes[id(node)] = (n, d)
 
 
-def _check_factors(source: _Source, terms: Sequence[Term], written: Sequence[Factor]) -> None:
+def _check_factors(source: SourceText, terms: Sequence[Term], written: Sequence[Factor]) -> None:
     used: dict[str, Factor] = {}
     for term in terms:
         for factor in term.factors:
             first = used.setdefault(factor.name, factor)
             if first != factor:
-                raise source.error(
-                    f"{source.text[slice(*first.span)]} and {source.text[slice(*factor.span)]} "
-                    "are the same term with different options. Keep one of them.",
-                    factor.span,
-                )
+                two = f"{source.cut(first.span)} and {source.cut(factor.span)}"
+                message = f"{two} are the same term with different options. Keep one of them."
+                raise source.error(message, factor.span)
     counts = Counter(written)
     for factor in written:
         if factor.name not in used and counts[factor] == 1:
-            raise source.error(
-                f"{factor.name} is taken away, but no term has it. Arithmetic stands in braces, "
-                "as in {-x}.",
-                factor.span,
-            )
+            message = f"{factor.name} is taken away, but no term has it. {_BRACES.format('{-x}')}"
+            raise source.error(message, factor.span)
 
 
-def _factor(source: _Source, piece: _Piece, strict: bool) -> Factor:
+def _factor(source: SourceText, piece: _Piece, strict: bool) -> Factor:
     """Read one factor; unless `strict`, options that must be given may be left out."""
-    kind, start, stop = piece
-    braces = kind == "brace"
-    node = _tree(source, start + braces, stop - braces)
-    span = (start, stop)
-    if not (isinstance(node, ast.Call) and isinstance(node.func, ast.Name)) or (
-        node.func.id not in _CALLS
-    ):
-        expression = _expression(source, node)  # first: it bounds the depth of what is unparsed
+    span, braces = piece.span, piece.kind == "brace"
+    node = source.tree(span[0] + braces, span[1] - braces)
+    call = node.func.id if isinstance(node, ast.Call) and isinstance(node.func, ast.Name) else ""
+    if not isinstance(node, ast.Call) or call not in _CALLS:
+        expression = source.expression(node)  # first: it bounds the depth of what is unparsed
         name = ast.unparse(node)
-        if not isinstance(node, ast.Name | ast.Call):
-            name = f"{{{name}}}"
+        name = name if isinstance(node, ast.Name | ast.Call) else f"{{{name}}}"
         return Factor("plain", (expression,), (), name, span)
-    call = node.func.id
     space, rules = _CALLS[call]
     if len(node.args) != 1:
-        raise source.error(
-            f"{call}() takes one column or expression, then options by name: "
-            f"{', '.join(f'{key}=' for key in rules)}.",
-            span,
-        )
-    argument = _expression(source, node.args[0])
+        known = ", ".join(f"{key}=" for key in rules)
+        message = f"{call}() takes one column or expression, then options by name: {known}."
+        raise source.error(message, span)
+    argument, written = source.expression(node.args[0]), ast.unparse(node.args[0])
     options: dict[str, Option] = {}
     for item in node.keywords:
         key, value = _option(source, call, item)
         if key in options:
-            raise source.error(f"{key}= is given twice.", _span(item))
+            raise source.error(f"{key}= is given twice.", span_of(item))
         options[key] = value
     if "smoothing" in options and "df" in options:
         raise source.error("smoothing= and df= both fix the smoothness. Give one of them.", span)
     if strict and "period" in rules and "period" not in options:
-        raise source.error(
-            f"{call}() needs its period: {call}({ast.unparse(node.args[0])}, period=...), "
-            f"{_PERIOD.words}.",
-            span,
-        )
+        message = f"{call}() needs its period: {call}({written}, period=...), {_PERIOD.words}."
+        raise source.error(message, span)
     named = [f"{k}={repr(v).removesuffix('.0')}" for k, v in options.items() if k in _NAMING]
-    name = f"{call}({', '.join([ast.unparse(node.args[0]), *named])})"
+    name = f"{call}({', '.join([written, *named])})"
     return Factor(space, (argument,), tuple(sorted(options.items())), name, span)
 
 
-def _option(source: _Source, call: str, item: ast.keyword) -> tuple[str, Option]:
-    rules, span = _CALLS[call][1], _span(item)
+def _option(source: SourceText, call: str, item: ast.keyword) -> tuple[str, Option]:
+    rules, span = _CALLS[call][1], span_of(item)
     if item.arg not in rules:
-        raise source.error(
-            f"{call}() has no option '{item.arg or '**'}'. {nearest(item.arg or '', rules)}", span
-        )
+        message = f"{call}() has no option '{item.arg or '**'}'. {nearest(item.arg or '', rules)}"
+        raise source.error(message, span)
     rule, node, sign = rules[item.arg], item.value, 1
     if isinstance(node, ast.UnaryOp) and isinstance(node.op, ast.USub):
         node, sign = node.operand, -1
-    value = node.value if isinstance(node, ast.Constant) else None
-    known = type(value) in (int, float) or (type(value) is str and sign == 1)
-    if isinstance(value, int) and abs(value) > 2**62:
-        value = math.inf  # no option has use for it, and float() of it might fail
-    if not known or not rule.holds(value if sign == 1 else -value):  # type: ignore[arg-type, operator]
+    value: Any = node.value if isinstance(node, ast.Constant) else None
+    number = type(value) is float and value < math.inf
+    number = number or (type(value) is int and value <= 2**62)  # none has use for a larger one
+    value = sign * value if number else value
+    if not (number or (type(value) is str and sign == 1)) or not rule.holds(value):
         raise source.error(f"{item.arg}= is {rule.words}.", span)
-    return item.arg, rule.convert(value if sign == 1 else -value)  # type: ignore[operator]
-
-
+    return item.arg, value if isinstance(value, str) else rule.convert(value)

@@ -13,7 +13,8 @@ import pandas as pd
 from addmodel.data import MISSING_LEVEL, UNSEEN_LEVEL, NewRows, column_key, read_new
 from addmodel.errors import Caution, DataError, ModelError, nearest
 from addmodel.estimate import Estimate
-from addmodel.formula import Expression, find
+from addmodel.expression import Expression
+from addmodel.formula import find
 from addmodel.inference import linear, quantile
 from addmodel.spaces.base import FloatArray
 from addmodel.spaces.levels import Levels

@@ -1,0 +1,29 @@
+"""What several tests share: data, published test terms, problems built by the package's own parts."""
+
+from pathlib import Path
+
+import numpy as np
+
+from addmodel.component import Design
+from addmodel.data import read
+from addmodel.estimate import Laid
+from addmodel.formula import parse
+from addmodel.outcomes import outcome_named
+from addmodel.solve.quadratic import Problem
+
+DATA = Path(__file__).parent / "data"
+
+
+def gw_terms(x: np.ndarray) -> np.ndarray:
+    """Terms of Gu & Wahba (1991, SIAM J. Sci. Stat. Comput. 12), columns x1, x2, x3 (n, 3)."""
+    a, b, c = x.T
+    third = 0.2 * c**11 * (10 * (1 - c)) ** 6 + 10 * (10 * c) ** 3 * (1 - c) ** 10
+    return np.column_stack([2 * np.sin(np.pi * a), np.exp(2 * b), third])
+
+
+def problem_for(formula: str, data: object) -> Problem:
+    """The reduced penalised quadratic of a model on data, summed about its start."""
+    model = parse(formula)
+    table = read(data, model)
+    laid = Laid.on(Design.lay(model, table), table, outcome_named("gaussian"))
+    return laid.problem(laid.start)
