@@ -83,9 +83,7 @@ def predict(
         Path, typer.Argument(help="New rows: a CSV or Parquet file.", show_default=False)
     ],
     out: Annotated[Path, typer.Option(help="CSV or Parquet file for the predictions.")],
-    interval: Annotated[
-        float, typer.Option(help="Level of the interval, between 0 and 1.")
-    ] = 0.95,
+    interval: Annotated[float, typer.Option(help="Level of the interval, between 0 and 1.")] = 0.95,
     new_observation: Annotated[
         bool, typer.Option("--new-observation", help="Interval for a new observation.")
     ] = False,
@@ -162,7 +160,8 @@ def _told() -> Iterator[None]:
             typer.echo(f"Error: {error}", err=True)
             raise typer.Exit(2) from None
         except OSError as error:
-            typer.echo(f"Error: {error.strerror or error}: {error.filename}", err=True)
+            where = error.filename2 or error.filename  # of two, the second is the one asked for
+            typer.echo(f"Error: {error.strerror or error}: {where}", err=True)
             raise typer.Exit(2) from None
         finally:
             for warning in caught:
@@ -206,12 +205,23 @@ def _write(found: Fit, out: Path) -> list[str]:
     if names:
         figures.save(found.plot(), out / "effects")
         written += ["effects.png", "effects.pdf", "and for each component a table and figures"]
-    for name in names:
+    for name, plain in zip(names, _file_names(names), strict=True):
         effect = found.effect(name)
-        stem = out / ("effect-" + re.sub(r"[^\w.]+", "-", name).strip("-"))
+        stem = out / f"effect-{plain}"
         _write_table(effect.table, stem.with_name(stem.name + ".csv"), index=False)
         figures.save(figures.single(effect.panel), stem)
     return written
+
+
+def _file_names(names: list[str]) -> list[str]:
+    """A plain file name for each component, no two alike even where capitals do not count."""
+    found: list[str] = []
+    for name in names:
+        plain = re.sub(r"[^\w.]+", "-", name).strip("-")[:100]
+        taken = {f.lower() for f in found}
+        numbered = (plain if k == 1 else f"{plain}-{k}" for k in range(1, len(names) + 1))
+        found.append(next(f for f in numbered if f.lower() not in taken))
+    return found
 
 
 def _write_table(table: pd.DataFrame, path: Path, index: bool = True) -> None:

@@ -17,7 +17,8 @@ from typing import Any
 import numpy as np
 import numpy.typing as npt
 
-from addmodel.data import Column, Table, column_key
+from addmodel.columns import Column, column_key
+from addmodel.data import Table
 from addmodel.errors import FormulaError, ModelError, nearest
 from addmodel.formula import Factor, Model, Term
 from addmodel.spaces.base import BoolArray, FloatArray, Penalised, Space
@@ -26,7 +27,7 @@ from addmodel.spaces.cycle import CALENDAR, Cycle
 from addmodel.spaces.levels import Levels
 from addmodel.spaces.line import Line
 
-Values = Mapping[str, npt.NDArray[np.generic]]
+Values = Mapping[str, npt.NDArray[Any]]
 """Covariate values by the key of their column, each (n,)."""
 
 DEPENDENT = 1e-9
@@ -88,7 +89,8 @@ class Component:
 
     def outside(self, values: Values) -> BoolArray:
         """Rows outside the data it was laid on, (n,)."""
-        return np.any([s.outside(values[s.key]) for s in self.spaces], axis=0)
+        beyond: BoolArray = np.any([s.outside(values[s.key]) for s in self.spaces], axis=0)
+        return beyond
 
 
 @dataclass(frozen=True)
@@ -143,7 +145,7 @@ class Design:
         share = weights / weights.sum()
         centres = share @ raw
         scales = np.sqrt(share @ (raw - centres) ** 2)
-        names = [f"{name}" for c in components for name in c.unpenalised_names]
+        names = [name for c in components for name in c.unpenalised_names]
         _check_rank((raw - centres) / scales, names)
         return cls(
             components=components,
@@ -270,7 +272,7 @@ def _component(
     options = dict(factor.options)
     space = _space(factor, model, table, weights, bending)
     df = options.get("df")
-    if df is not None:
+    if isinstance(df, int | float):
         least = len(space.unpenalised_names)
         if not least < df < least + space.most:
             raise FormulaError(
@@ -285,14 +287,12 @@ def _component(
         spaces=(space,),
         own=tuple(range(len(space.unpenalised_names))),
         smoothing=None if smoothing is None else float(smoothing),
-        df=None if df is None else float(df),
+        df=float(df) if isinstance(df, int | float) else None,
         everything=options.get("detail") == "all",
     )
 
 
-def _space(
-    factor: Factor, model: Model, table: Table, weights: FloatArray, bending: int
-) -> Space:
+def _space(factor: Factor, model: Model, table: Table, weights: FloatArray, bending: int) -> Space:
     (expression,) = factor.arguments
     key = column_key(factor, expression)
     column = table.columns[key]
@@ -338,9 +338,7 @@ def _space(
     return space
 
 
-def _base(
-    wanted: object, column: Column, weights: FloatArray, model: Model, factor: Factor
-) -> int:
+def _base(wanted: object, column: Column, weights: FloatArray, model: Model, factor: Factor) -> int:
     """Code of the base level."""
     if wanted is None:
         return 0
@@ -403,7 +401,9 @@ def _without_spanned(
 
 def _standardised(columns: FloatArray) -> FloatArray:
     centred = columns - columns.mean(axis=0)
-    return centred / np.maximum(np.linalg.norm(centred, axis=0), np.finfo(float).tiny)
+    lengths = np.maximum(np.linalg.norm(centred, axis=0), np.finfo(float).tiny)
+    standardised: FloatArray = centred / lengths
+    return standardised
 
 
 def _spans(others: FloatArray, column: FloatArray) -> bool:
@@ -419,16 +419,16 @@ def _spans(others: FloatArray, column: FloatArray) -> bool:
 def _check_rank(columns: FloatArray, names: Sequence[str]) -> None:
     """Exact linear dependence among unpenalised columns is an error that names them."""
     n, p = columns.shape
-    if p >= n:
+    if p + 1 >= n:
         raise ModelError(
             f"The model has {p + 1} unpenalised coefficients and the data only {n} rows. "
             f"Leave out terms, or merge levels."
         )
     if p == 0:
         return
-    r = np.linalg.qr(columns / np.sqrt(n), mode="r")
+    diagonal = np.abs(np.diag(np.linalg.qr(columns / np.sqrt(n))[1]))
     for k in range(p):
-        if abs(r[k, k]) < DEPENDENT:
+        if diagonal[k] < DEPENDENT:
             solution = np.linalg.lstsq(columns[:, :k], columns[:, k], rcond=None)[0]
             with_it = [names[i] for i in range(k) if abs(solution[i]) > 1e-6]
             raise ModelError(

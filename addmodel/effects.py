@@ -2,15 +2,16 @@
 
 from __future__ import annotations
 
+from collections.abc import Iterable
 from dataclasses import dataclass
-from typing import TYPE_CHECKING
+from typing import TYPE_CHECKING, Any, Literal
 
 import numpy as np
 import pandas as pd
 
 from addmodel import figures
+from addmodel.columns import Column
 from addmodel.component import Component
-from addmodel.data import Column
 from addmodel.errors import ModelError, nearest
 from addmodel.estimate import Estimate
 from addmodel.inference import linear, quantile
@@ -75,18 +76,21 @@ def effect(estimate: Estimate, name: str, *, at: object, level: float) -> Effect
     )
     spread = estimate.design.spreads[space.key]
     cyclic = isinstance(space, Cycle)
+    codes = x.astype(np.int64) if column.kind == "levels" else np.empty(0, dtype=np.int64)
+    along = np.arange(len(x), dtype=np.float64) if len(codes) else _along(space, x)
+    order = np.argsort(along, kind="stable")  # at= may come in any order; a picture ascends
     panel = figures.Panel(
         kind=_kind(space),
-        covariate=space.key,
+        covariate=_axis_label(space),
         quantity=f"Effect on {estimate.model.outcome.text}",
-        x=_along(space, x),
-        effect=value,
-        lower=value - half,
-        upper=value + half,
+        x=along[order],
+        effect=value[order],
+        lower=(value - half)[order],
+        upper=(value + half)[order],
         level=level,
-        labels=column.levels,
+        labels=tuple(column.levels[code] for code in codes),
         quantiles=np.sort(_along(space, spread.quantiles)) if cyclic else spread.quantiles,
-        shares=spread.shares,
+        shares=spread.shares[codes],
         dates=column.kind == "date" and not cyclic,
         period=space.period if isinstance(space, Cycle) else None,
     )
@@ -98,7 +102,7 @@ def grid(estimate: Estimate, component: Component) -> FloatArray:
     (space,) = component.spaces
     column = estimate.design.columns[space.key]
     if isinstance(space, Levels):
-        return np.arange(len(column.levels))
+        return np.arange(len(column.levels), dtype=np.float64)
     if isinstance(space, Cycle) and not isinstance(space.period, str):
         return np.linspace(0.0, space.period, GRID)
     if isinstance(space, Cycle):
@@ -130,7 +134,14 @@ def _calendar(first: float, period: str) -> FloatArray:
     return np.linspace(low, high, GRID)
 
 
-def _kind(space: object) -> figures.Kind:
+def _axis_label(space: object) -> str:
+    if isinstance(space, Cycle) and isinstance(space.period, str):
+        part = {"day": "hour", "week": "day", "month": "day", "year": "time"}[space.period]
+        return f"{space.key}, {part} of the {space.period}"
+    return str(getattr(space, "key", ""))
+
+
+def _kind(space: object) -> Literal["curve", "cycle", "line", "levels"]:
     if isinstance(space, Levels):
         return "levels"
     if isinstance(space, Line):
@@ -148,19 +159,19 @@ def _along(space: object, x: FloatArray) -> FloatArray:
     return t if isinstance(space.period, str) else t * space.period
 
 
-def _shown(
-    x: FloatArray, kind: str, levels: tuple[str, ...], space: object
-) -> pd.Series | np.ndarray:
+def _shown(x: FloatArray, kind: str, levels: tuple[str, ...], space: object) -> Any:
     if kind == "levels":
-        return pd.Categorical.from_codes(np.asarray(x, dtype=np.int64), categories=list(levels))
+        return pd.Categorical.from_codes(x.astype(np.int64), categories=pd.Index(levels))
     if kind == "date":
-        return np.datetime64("1970-01-01", "us") + (x * 86_400e6).astype("timedelta64[us]")
+        return np.datetime64(0, "us") + (x * 86_400e6).round().astype("timedelta64[us]")
     return x
 
 
 def _given(column: Column, at: object) -> FloatArray:
     """Values that the caller asks for, as the space takes them."""
-    listed = [at] if isinstance(at, str) or np.ndim(at) == 0 else list(at)  # type: ignore[call-overload]
+    listed: list[Any] = list(at) if isinstance(at, Iterable) and not isinstance(at, str) else [at]
+    if not listed:
+        raise ModelError(f"at= needs at least one value of {column.name}.")
     if column.kind == "levels":
         for label in listed:
             if str(label) not in column.levels:
@@ -168,11 +179,12 @@ def _given(column: Column, at: object) -> FloatArray:
                     f"at={label!r} is not a level of {column.name}. "
                     f"{nearest(str(label), column.levels)}"
                 )
-        return np.array([column.levels.index(str(label)) for label in listed])
+        return np.array([column.levels.index(str(label)) for label in listed], dtype=np.float64)
     try:
         if column.kind == "date":
-            days = np.asarray(pd.to_datetime(listed), dtype="datetime64[us]")
-            return (days - np.datetime64("1970-01-01", "us")) / np.timedelta64(1, "D")
+            times = np.asarray(pd.to_datetime(listed), dtype="datetime64[us]")
+            days: FloatArray = (times - np.datetime64(0, "us")) / np.timedelta64(1, "D")
+            return days
         values = np.asarray(listed, dtype=np.float64)
     except (TypeError, ValueError) as error:
         raise ModelError(f"at= needs values of {column.name}; got {at!r}.") from error

@@ -206,7 +206,7 @@ class Laid:
         values = {key: column.values for key, column in table.columns.items()}
         columns = design.matrix(values, len(weights))
         plain = columns[:, : design.p] * np.sqrt(table.counts)[:, None]
-        diagonal = np.diag(np.linalg.qr(plain, mode="r"))
+        diagonal = np.diag(np.linalg.qr(plain)[1])
         # Starting at the mean keeps the digits of a large constant out of the sums of squares.
         start = np.zeros(columns.shape[1])
         start[0] = np.average(table.outcome - table.offset, weights=weights)
@@ -220,10 +220,10 @@ class Laid:
             n=float(table.counts.sum()),
         )
 
-    def problem(self, coefficients: FloatArray) -> Problem:
+    def problem(self, coefficients: FloatArray, gram: FloatArray | None = None) -> Problem:
         """The penalised quadratic about the coefficients (P,)."""
         return Problem.of(
-            self.rows.sweep(coefficients, self.outcome),
+            self.rows.sweep(coefficients, self.outcome, gram),
             self.design.p,
             self.design.block_sizes,
             log_det_design=self.log_det_design,
@@ -236,9 +236,11 @@ class Laid:
         owners = [self.design.components[j] for j in self.design.block_owners]
         fixed = [c.smoothing for c in owners]
         degrees = [None if c.df is None else c.df - len(c.own) for c in owners]
-        first = choose(self.problem(self.start), criterion, fixed, degrees)
+        problem = self.problem(self.start)
+        first = choose(problem, criterion, fixed, degrees)
         free = [f is None and d is None for f, d in zip(fixed, degrees, strict=True)]
-        again = self.problem(first.point.coefficients())
+        # A Gaussian outcome's weights do not change with its mean, so X'WX stays.
+        again = self.problem(first.point.coefficients(), problem.sums.gram)
         return newton_from(first, again, criterion, free)
 
 
@@ -295,7 +297,7 @@ def _log_likelihood(deviance: float, n: float, log_weights: float) -> float:
     """Gaussian log-likelihood at its own variance, deviance/n."""
     if deviance <= 0:
         return np.inf
-    return -0.5 * n * (np.log(2 * np.pi * deviance / n) + 1) + 0.5 * log_weights
+    return float(-0.5 * n * (np.log(2 * np.pi * deviance / n) + 1) + 0.5 * log_weights)
 
 
 def _cautions(design: Design, smoothness: Smoothness) -> list[str]:

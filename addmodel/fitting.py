@@ -302,7 +302,6 @@ class Fit:
         """Posterior draws of all coefficients, shape (count, P), in the order of `columns`."""
         return posterior_draws(self.estimate, count, seed)
 
-
     def save(self, path: str | Path) -> None:
         """Write the fit, without its rows, to a file; its name ends in .addmodel."""
         target = Path(path)

@@ -15,7 +15,7 @@ from collections.abc import Callable, Mapping, Sequence
 from dataclasses import dataclass
 from decimal import Decimal, InvalidOperation, localcontext
 from pathlib import Path
-from typing import Any, TypeAlias
+from typing import Any, Literal, TypeAlias
 
 import narwhals as nw
 import numpy as np
@@ -25,9 +25,9 @@ import pandas as pd
 from addmodel.errors import DataError
 
 BoolArray: TypeAlias = npt.NDArray[np.bool_]
-Column: TypeAlias = "pd.Series[Any]"
+Series: TypeAlias = "pd.Series[Any]"
 Index: TypeAlias = "pd.Index[Any]"
-Read: TypeAlias = Callable[[list[str]], tuple[dict[str, Column], Index]]
+Read: TypeAlias = Callable[[list[str]], tuple[dict[str, Series], Index]]
 
 ACCEPTED = (
     "Give a pandas, polars or arrow table, a mapping of column names to 1-D arrays, "
@@ -61,7 +61,7 @@ class Source:
     what: str
     read: Read
 
-    def load(self, needed: Sequence[str]) -> tuple[dict[str, Column], Index]:
+    def load(self, needed: Sequence[str]) -> tuple[dict[str, Series], Index]:
         """Read the needed columns, each with the row numbers as its index.
 
         Raises
@@ -98,13 +98,13 @@ def open_source(data: object) -> Source:
     return _from_narwhals(data)
 
 
-def _numbered(column: Column) -> Column:
+def _numbered(column: Series) -> Series:
     """The column with row numbers for an index; shares its values with the caller's."""
     return column.set_axis(pd.RangeIndex(len(column)))
 
 
 def _from_pandas(data: pd.DataFrame, what: str = "the data") -> Source:
-    def read(needed: list[str]) -> tuple[dict[str, Column], Index]:
+    def read(needed: list[str]) -> tuple[dict[str, Series], Index]:
         return {name: _numbered(data[name]) for name in needed}, data.index
 
     return Source(tuple(data.columns), what, read)
@@ -124,7 +124,7 @@ def _from_narwhals(data: object) -> Source:
         raise DataError(f"the data cannot be a {kind}. {ACCEPTED}")
     schema = table.schema
 
-    def read(needed: list[str]) -> tuple[dict[str, Column], Index]:
+    def read(needed: list[str]) -> tuple[dict[str, Series], Index]:
         part = table.select(needed)
         # polars numbers its categories in the order the process met them, which no analysis
         # should depend on; as text they sort by themselves. Its Enum has a declared order.
@@ -139,7 +139,7 @@ def _from_narwhals(data: object) -> Source:
 
 
 def _from_mapping(data: Mapping[Any, Any]) -> Source:
-    def read(needed: list[str]) -> tuple[dict[str, Column], Index]:
+    def read(needed: list[str]) -> tuple[dict[str, Series], Index]:
         names = needed or list(data)[:1]
         columns = {name: as_series(data[name], f"column '{name}'") for name in names}
         lengths = {name: len(column) for name, column in columns.items()}
@@ -151,7 +151,7 @@ def _from_mapping(data: Mapping[Any, Any]) -> Source:
     return Source(tuple(data), "the data", read)
 
 
-def _shared_index(data: Mapping[Any, Any], columns: Mapping[str, Column]) -> Index:
+def _shared_index(data: Mapping[Any, Any], columns: Mapping[str, Series]) -> Index:
     """The one index of all pandas Series of a mapping; arrays and lists go by position."""
     labelled = {name: data[name].index for name in columns if isinstance(data[name], pd.Series)}
     names = list(labelled)
@@ -165,7 +165,7 @@ def _shared_index(data: Mapping[Any, Any], columns: Mapping[str, Column]) -> Ind
     return labelled[names[0]] if names else pd.RangeIndex(length)
 
 
-def as_series(values: Any, what: str) -> Column:
+def as_series(values: Any, what: str) -> Series:
     """One column given as an array, list or Series of any library; `what` names it in errors.
 
     Raises
@@ -182,7 +182,10 @@ def as_series(values: Any, what: str) -> Column:
         raise DataError(f"{what} is {dimensions}-D; it must be a 1-D array or list.")
     if not hasattr(values, "dtype"):
         values = list(values)
-    return pd.Series(values)
+    try:
+        return pd.Series(values)
+    except OverflowError:  # pandas 2 tries to make a float of whole numbers of any length
+        return pd.Series(values, dtype=object)
 
 
 def _from_file(path: Path) -> Source:
@@ -214,15 +217,19 @@ def _from_parquet(path: Path) -> Source:
 
     schema = parquet.read_schema(path)
     # pandas stores its index among the columns; it is no column of the data
-    stored = (schema.pandas_metadata or {}).get("index_columns", [])
+    index = (schema.pandas_metadata or {}).get("index_columns", [])
+    stored = [name for name in schema.names if name in index]
     names = tuple(name for name in schema.names if name not in stored)
 
-    def read(needed: list[str]) -> tuple[dict[str, Column], Index]:
+    def read(needed: list[str]) -> tuple[dict[str, Series], Index]:
         try:
-            table = pd.read_parquet(path, engine="pyarrow", columns=needed, dtype_backend="pyarrow")
+            table = parquet.read_table(path, columns=[*needed, *stored])
+            index = table.select(stored).to_pandas().index
         except _READING as error:
             raise _unreadable(path, error) from error
-        return _from_pandas(table).read(needed)
+        columns = {name: _arrow_column(table.column(name)) for name in needed}
+        # without a stored index arrow may not know the length
+        return columns, index if len(index) == len(table) else pd.RangeIndex(len(table))
 
     return Source(names, f"'{path}'", read)
 
@@ -235,7 +242,7 @@ def _from_text(path: Path, separator: str) -> Source:
     with csv.open_csv(path, parse_options=parsing) as opened:
         names = tuple(opened.schema.names)
 
-    def read(needed: list[str]) -> tuple[dict[str, Column], Index]:
+    def read(needed: list[str]) -> tuple[dict[str, Series], Index]:
         wanted = needed or [names[0]]
         # as text first: its own guesses of types look at the first rows only
         converting = csv.ConvertOptions(
@@ -253,7 +260,7 @@ def _from_text(path: Path, separator: str) -> Source:
     return Source(names, f"'{path}'", read)
 
 
-def _typed(text: Any) -> Column:
+def _typed(text: Any) -> Series:
     """A text column as whole numbers, numbers, yes/no or ISO dates, if every value is one."""
     from pyarrow import ArrowInvalid, array, bool_, compute, float64, int64
 
@@ -276,11 +283,11 @@ def _typed(text: Any) -> Column:
     return _arrow_column(text)
 
 
-def _arrow_column(array: Any) -> Column:
+def _arrow_column(array: Any) -> Series:
     return pd.Series(pd.arrays.ArrowExtensionArray(array))
 
 
-def missing_cells(values: Column) -> BoolArray:
+def missing_cells(values: Series) -> BoolArray:
     """Where a column is missing: NaN, None, NaT, NA."""
     with localcontext() as context:
         context.traps[InvalidOperation] = False  # a signalling decimal NaN is missing too
@@ -292,7 +299,7 @@ def missing_cells(values: Column) -> BoolArray:
     return mask
 
 
-def plain_kind(values: Column) -> str:
+def plain_kind(values: Series) -> Literal["number", "bool", "category", "date", "text"]:
     """number, bool, category, date or text: what a column of a plain type holds."""
     dtype = values.dtype
     if isinstance(dtype, pd.CategoricalDtype):
@@ -304,7 +311,7 @@ def plain_kind(values: Column) -> str:
     return "date" if pd.api.types.is_datetime64_dtype(dtype) else "text"
 
 
-def text_hint(values: Column) -> str:
+def text_hint(values: Series) -> str:
     """How to mend a text column that ought to be numbers or dates; empty where it ought not."""
     if plain_kind(values) != "text":
         return ""
@@ -320,7 +327,7 @@ def text_hint(values: Column) -> str:
     return f" It looks like numbers ({shown}){but}: convert it with pd.to_numeric."
 
 
-def plain_type(values: Column, name: str) -> Column:
+def plain_type(values: Series, name: str) -> Series:
     """Bring a column without missing values to a plain type; `name` names it in errors.
 
     Numbers keep their width, so that whole numbers too long for a float stay distinct as levels.
@@ -332,8 +339,13 @@ def plain_type(values: Column, name: str) -> Column:
         If the column holds anything else (complex numbers, lists, a mixture of types).
     """
     if isinstance(values.dtype, pd.ArrowDtype):
+        from pyarrow import dictionary, int64, types
+
         array: Any = values.array
-        values = array.__arrow_array__().to_pandas().set_axis(values.index)
+        array = array.__arrow_array__()
+        if types.is_dictionary(array.type):  # old arrow hands over no unsigned codes, as polars has
+            array = array.cast(dictionary(int64(), array.type.value_type))
+        values = array.to_pandas().set_axis(values.index)
     if isinstance(values.dtype, pd.SparseDtype):
         values = pd.Series(np.asarray(values), index=values.index)
     dtype: Any = values.dtype
@@ -356,7 +368,7 @@ def plain_type(values: Column, name: str) -> Column:
 _USABLE = "it must hold numbers, text, bool, categories, dates or times."
 
 
-def _plain_objects(values: Column, name: str) -> Column:
+def _plain_objects(values: Series, name: str) -> Series:
     """A column of Python objects, all of one usable type."""
 
     def every(*types: type) -> bool:
@@ -375,15 +387,15 @@ def _plain_objects(values: Column, name: str) -> Column:
         return pd.Series(np.array(made, dtype="datetime64[us]"), index=values.index)
     if every(dt.timedelta):
         made = [value / dt.timedelta(days=1) for value in values]
-        return pd.Series(made, index=values.index, dtype=np.float64)
-    if every(dt.time):
+    elif every(dt.time):
         made = [v.hour + v.minute / 60 + (v.second + v.microsecond / 1e6) / 3600 for v in values]
-        return pd.Series(made, index=values.index, dtype=np.float64)
-    found = ", ".join(sorted(kind.__name__ for kind in kinds))
-    raise DataError(f"column '{name}' holds values of type {found}; {_USABLE[:-1]}, all alike.")
+    else:
+        found = ", ".join(sorted(kind.__name__ for kind in kinds))
+        raise DataError(f"column '{name}' holds values of type {found}; {_USABLE[:-1]}, all alike.")
+    return pd.Series(made, index=values.index, dtype=np.float64)
 
 
-def _plain_numbers(values: Column, name: str, whole: bool) -> Column:
+def _plain_numbers(values: Series, name: str, whole: bool) -> Series:
     if whole:
         try:
             return values.astype(np.int64)

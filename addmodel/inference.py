@@ -7,6 +7,8 @@ Assoc. 83). The smoothing parameters count as known.
 
 from __future__ import annotations
 
+from numbers import Integral, Real
+
 import numpy as np
 import pandas as pd
 import scipy.linalg
@@ -31,7 +33,7 @@ def quantile(estimate: Estimate, level: float) -> float:
 
 def check_level(level: float) -> None:
     """A confidence level is a number between 0 and 1."""
-    if isinstance(level, bool) or not isinstance(level, int | float) or not 0 < level < 1:
+    if isinstance(level, bool) or not isinstance(level, Real) or not 0 < level < 1:
         raise ModelError(f"A level is a number between 0 and 1, such as 0.95; got {level!r}.")
 
 
@@ -119,8 +121,10 @@ def components_table(estimate: Estimate) -> pd.DataFrame:
 
 def posterior_draws(estimate: Estimate, count: int, seed: int) -> FloatArray:
     """Draws of all coefficients as reported, from N(β̂, σ²A⁻¹), shape (count, P)."""
-    if isinstance(count, bool) or not isinstance(count, int) or count < 1:
+    if isinstance(count, bool) or not isinstance(count, Integral) or count < 1:
         raise ModelError(f"The number of draws is a whole number of at least 1; got {count!r}.")
+    if isinstance(seed, bool) or not isinstance(seed, Integral) or seed < 0:
+        raise ModelError(f"A seed is a whole number of at least 0; got {seed!r}.")
     change = estimate.design.reporting()
     used = np.diag(estimate.covariance) > 0
     covariance = estimate.covariance[np.ix_(used, used)]

@@ -3,14 +3,15 @@
 from __future__ import annotations
 
 import warnings
-from collections.abc import Sequence
+from collections.abc import Iterable, Sequence
 from dataclasses import replace
 from typing import Literal
 
 import numpy as np
 import pandas as pd
 
-from addmodel.data import MISSING_LEVEL, UNSEEN_LEVEL, NewRows, column_key, read_new
+from addmodel.columns import MISSING_LEVEL, UNSEEN_LEVEL, column_key
+from addmodel.data import NewRows, read_new
 from addmodel.errors import Caution, DataError, ModelError, nearest
 from addmodel.estimate import Estimate
 from addmodel.expression import Expression
@@ -39,7 +40,9 @@ def predict(
         raise ModelError("new_observation=True needs interval=, such as interval=0.95.")
     chosen = _chosen(estimate, only, without)
     if new_observation and len(chosen) < len(estimate.design.components):
-        raise ModelError("An interval for a new observation needs the whole model: no only=/without=.")
+        raise ModelError(
+            "An interval for a new observation needs the whole model: no only=/without=."
+        )
     rows = new_rows(estimate, new, unseen=unseen, missing=missing)
     design = estimate.design
     values = {key: column.values for key, column in rows.columns.items()}
@@ -121,14 +124,15 @@ def new_rows(estimate: Estimate, new: object, *, unseen: str, missing: str) -> N
     return rows
 
 
-def components_named(
-    estimate: Estimate, names: str | Sequence[str] | None
-) -> list[int]:
+def components_named(estimate: Estimate, names: str | Sequence[str] | None) -> list[int]:
     """Positions of the components of those names."""
     if names is None:
         return []
     known = [c.name for c in estimate.design.components]
-    wanted = [names] if isinstance(names, str) else list(names)
+    wanted = [names] if isinstance(names, str) or not isinstance(names, Iterable) else list(names)
+    for name in wanted:
+        if not isinstance(name, str):
+            raise ModelError(f"Components are named by text, such as 'curve(x)'; got {name!r}.")
     return [known.index(find(name, known)) for name in wanted]
 
 
@@ -146,9 +150,9 @@ def _chosen(
 def _filled(values: dict[str, np.ndarray]) -> dict[str, np.ndarray]:
     """Any number in place of a missing one: those rows are set to missing afterwards."""
     return {
-        key: np.where(np.isnan(x), 0.0, x) if x.dtype.kind == "f" else np.where(
-            x == MISSING_LEVEL, UNSEEN_LEVEL, x
-        )
+        key: np.where(np.isnan(x), 0.0, x)
+        if x.dtype.kind == "f"
+        else np.where(x == MISSING_LEVEL, UNSEEN_LEVEL, x)
         for key, x in values.items()
     }
 

@@ -7,9 +7,11 @@ draws its effects, and holds no data of the persons or places behind it but summ
 from __future__ import annotations
 
 import dataclasses
+import hashlib
 import io
 import json
 import zipfile
+import zlib
 from collections.abc import Mapping
 from pathlib import Path
 from types import MappingProxyType
@@ -17,8 +19,8 @@ from typing import Any
 
 import numpy as np
 
+from addmodel.columns import Column
 from addmodel.component import Component, Design, Spread
-from addmodel.data import Column
 from addmodel.errors import DataError
 from addmodel.estimate import Estimate, Reading
 from addmodel.files import replacing
@@ -34,6 +36,12 @@ KINDS: dict[str, type[Any]] = {
     kind.__name__: kind
     for kind in (Column, Component, Curve, Cycle, Design, Estimate, Levels, Line, Reading, Spread)
 }
+DIGEST = "sha256"
+DAMAGE = (
+    *(zipfile.BadZipFile, zlib.error, EOFError, RuntimeError, MemoryError),  # the archive
+    *(ArithmeticError, AttributeError, LookupError, TypeError, ValueError, SyntaxError),  # contents
+)
+"""What reading and decoding raise on a file that is not as `save` wrote it."""
 EPOCH = (1980, 1, 1, 0, 0, 0)  # the same fit gives the same bytes
 
 
@@ -42,12 +50,15 @@ def save(estimate: Estimate, path: Path) -> None:
     bare = dataclasses.replace(estimate, table=None, linear_predictor=None)
     arrays: list[np.ndarray[Any, Any]] = []
     body = {"format": "addmodel fit", "version": VERSION, "estimate": _encoded(bare, arrays)}
+    members = {"fit.json": json.dumps(body, allow_nan=False, indent=1).encode()}
+    for number, array in enumerate(arrays):
+        buffer = io.BytesIO()
+        np.lib.format.write_array(buffer, array, allow_pickle=False)
+        members[f"arrays/{number}.npy"] = buffer.getvalue()
+    members[DIGEST] = digest(members).encode()
     with replacing(path) as temporary, zipfile.ZipFile(temporary, "w") as archive:
-        _add(archive, "fit.json", json.dumps(body, allow_nan=False, indent=1).encode())
-        for number, array in enumerate(arrays):
-            buffer = io.BytesIO()
-            np.lib.format.write_array(buffer, array, allow_pickle=False)
-            _add(archive, f"arrays/{number}.npy", buffer.getvalue())
+        for name, content in members.items():
+            _add(archive, name, content)
 
 
 def load(path: Path) -> Estimate:
@@ -62,22 +73,40 @@ def load(path: Path) -> Estimate:
         raise DataError(f"There is no file {path}.")
     try:
         with zipfile.ZipFile(path) as archive:
-            body = json.loads(archive.read("fit.json"))
-            if not isinstance(body, dict) or body.get("format") != "addmodel fit":
-                raise DataError(f"{path} is not a saved fit.")
-            if body.get("version") != VERSION:
-                raise DataError(
-                    f"{path} has format version {body.get('version')}; this addmodel reads version "
-                    f"{VERSION}. Use the version of addmodel that wrote it, or fit again."
-                )
-            found = _decoded(body["estimate"], archive)
-    except (zipfile.BadZipFile, KeyError, TypeError, ValueError, EOFError, RecursionError) as error:
+            if any(entry.compress_type != zipfile.ZIP_DEFLATED for entry in archive.infolist()):
+                raise zipfile.BadZipFile("a saved fit is deflated")
+            members = {name: archive.read(name) for name in archive.namelist()}
+        body = json.loads(members["fit.json"])
+        if not isinstance(body, dict) or body.get("format") != "addmodel fit":
+            raise DataError(f"{path} is not a saved fit.")
+        if body.get("version") != VERSION:
+            raise DataError(
+                f"{path} has format version {body.get('version')}; this addmodel reads version "
+                f"{VERSION}. Use the version of addmodel that wrote it, or fit again."
+            )
+        if members.pop(DIGEST).decode() != digest(members):
+            raise ValueError("the contents are not those that were saved")
+        found = _decoded(body["estimate"], members)
+    except OSError as error:
+        raise DataError(f"{path} cannot be read: {error}.") from error
+    except DAMAGE as error:
         if isinstance(error, DataError):
             raise
         raise DataError(f"{path} is not a saved fit, or it is damaged. Fit again.") from error
     if not isinstance(found, Estimate):
         raise DataError(f"{path} is not a saved fit, or it is damaged. Fit again.")
     return found
+
+
+def digest(members: Mapping[str, bytes]) -> str:
+    """SHA-256 over the names and contents of a saved fit, in their order, as hexadecimal digits.
+
+    It finds accidents and edits by hand; it is no proof of where a file comes from.
+    """
+    found = hashlib.sha256()
+    for name, content in members.items():
+        found.update(f"{name} {len(content)}\n".encode() + content)
+    return found.hexdigest()
 
 
 def _add(archive: zipfile.ZipFile, name: str, content: bytes) -> None:
@@ -111,9 +140,9 @@ def _encoded(value: Any, arrays: list[np.ndarray[Any, Any]]) -> Any:
     return value
 
 
-def _decoded(value: Any, archive: zipfile.ZipFile) -> Any:
+def _decoded(value: Any, members: Mapping[str, bytes]) -> Any:
     if isinstance(value, list):
-        return tuple(_decoded(v, archive) for v in value)
+        return tuple(_decoded(v, members) for v in value)
     if not isinstance(value, dict):
         return value
     if "formula" in value:
@@ -121,13 +150,13 @@ def _decoded(value: Any, archive: zipfile.ZipFile) -> Any:
     if "outcome" in value:
         return outcome_named(value["outcome"])
     if "array" in value:
-        content = io.BytesIO(archive.read(f"arrays/{int(value['array'])}.npy"))
+        content = io.BytesIO(members[f"arrays/{int(value['array'])}.npy"])
         array = np.lib.format.read_array(content, allow_pickle=False)
         array.setflags(write=False)
         return array
     if "map" in value:
-        return MappingProxyType({k: _decoded(v, archive) for k, v in value["map"]})
+        return MappingProxyType({k: _decoded(v, members) for k, v in value["map"]})
     if "float" in value:
         return float.fromhex(value["float"])
     kind = KINDS[value["kind"]]
-    return kind(**{name: _decoded(v, archive) for name, v in value["fields"].items()})
+    return kind(**{name: _decoded(v, members) for name, v in value["fields"].items()})

@@ -109,9 +109,7 @@ def _words(estimate: Estimate) -> str:
         f"{100 * reduction:.1f} % of the null deviance."
     )
     bending = [
-        j
-        for j, c in enumerate(estimate.design.components)
-        if isinstance(c.spaces[0], Penalised)
+        j for j, c in enumerate(estimate.design.components) if isinstance(c.spaces[0], Penalised)
     ]
     if bending:
         unsure = [

@@ -1,4 +1,4 @@
-"""What several tests share: data, published test terms, problems built by the package's own parts."""
+"""What several tests share: data, published test terms, problems from the package's own parts."""
 
 from pathlib import Path
 

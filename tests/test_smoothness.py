@@ -1,4 +1,4 @@
-"""Smoothness against direct dense solutions and against the other road: differences, state space."""
+"""Smoothness against direct dense solutions, and against differences and densities."""
 
 import numpy as np
 import pandas as pd
@@ -58,7 +58,6 @@ def case(name: str) -> tuple[str, pd.DataFrame]:
     if name == "one":
         return "z ~ curve(x3)", d.assign(z=d.y - terms[:, 0] - terms[:, 1])
     return "y ~ curve(x1) + curve(x2) + curve(x3) + curve(x4)", d
-
 
 
 def every(formula: str) -> str:
@@ -132,10 +131,7 @@ def test_gradient_and_hessian_against_differences(name, criterion):
     def central(f):
         # Fourth-order central differences, one coordinate at a time.
         return np.array(
-            [
-                (8 * (f(rho + e) - f(rho - e)) - (f(rho + 2 * e) - f(rho - 2 * e))) / 12e-4
-                for e in h
-            ]
+            [(8 * (f(rho + e) - f(rho - e)) - (f(rho + 2 * e) - f(rho - 2 * e))) / 12e-4 for e in h]
         )
 
     gradient = c.gradient(problem.at(np.exp(rho)))
@@ -190,7 +186,9 @@ def test_given_smoothing_equals_scipy(lam):
     x, where, count = np.unique(d.times, return_inverse=True, return_counts=True)
     mean = np.bincount(where, d.accel) / count
     spline = make_smoothing_spline(x, mean, w=count.astype(float), lam=lam)
-    fit = am.fit(f'accel ~ curve(times, detail="all", smoothing={float(lam / np.ptp(x) ** 3)!r})', d)
+    fit = am.fit(
+        f'accel ~ curve(times, detail="all", smoothing={float(lam / np.ptp(x) ** 3)!r})', d
+    )
     assert np.abs(fit.fitted - spline(d.times)).max() < 1e-9 * np.ptp(d.accel)
     known = {10.0: 14.10697450, 100.0: 8.44254592}  # trace of the dense hat matrix (Reinsch form)
     if lam in known:
@@ -198,7 +196,7 @@ def test_given_smoothing_equals_scipy(lam):
 
 
 def test_given_df_is_reached_beside_free_curves():
-    formula, data = case("four")
+    _, data = case("four")
     fit = am.fit("y ~ curve(x1, df=4.5) + curve(x2) + curve(x3)", data)
     assert fit.components.loc["curve(x1)", "effective_df"] == pytest.approx(4.5, abs=1e-7)
     # The free ones are at their optimum beside it.

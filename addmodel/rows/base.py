@@ -42,8 +42,10 @@ class Rows(ABC):
     """Rows of the model's columns, with outcome, weights and offset."""
 
     @abstractmethod
-    def sweep(self, coefficients: FloatArray, outcome: Outcome) -> Sums:
-        """Sums over all rows at the coefficients (P,)."""
+    def sweep(
+        self, coefficients: FloatArray, outcome: Outcome, gram: FloatArray | None = None
+    ) -> Sums:
+        """Sums over all rows at the coefficients (P,); `gram` where it is known already."""
 
     @abstractmethod
     def linear_predictor(self, coefficients: FloatArray) -> FloatArray:

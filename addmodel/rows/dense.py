@@ -4,6 +4,8 @@ from __future__ import annotations
 
 from dataclasses import dataclass
 
+import numpy as np
+
 from addmodel.outcomes import Outcome
 from addmodel.rows.base import Rows, Sums
 from addmodel.spaces.base import FloatArray
@@ -18,12 +20,17 @@ class DenseRows(Rows):
     weights: FloatArray  # (n,) prior weight times count
     offset: FloatArray  # (n,)
 
-    def sweep(self, coefficients: FloatArray, outcome: Outcome) -> Sums:
+    def sweep(
+        self, coefficients: FloatArray, outcome: Outcome, gram: FloatArray | None = None
+    ) -> Sums:
         eta = self.linear_predictor(coefficients)
         slope, weight = outcome.slope_and_weight(self.y, eta, self.weights)
+        if gram is None:
+            rooted = self.columns * np.sqrt(weight)[:, None]
+            gram = rooted.T @ rooted
         return Sums(
             at=coefficients,
-            gram=self.columns.T @ (self.columns * weight[:, None]),
+            gram=gram,
             score=self.columns.T @ slope,
             deviance=outcome.deviance(self.y, outcome.mean(eta), self.weights),
         )

@@ -56,7 +56,7 @@ class Reml(Criterion):
         variance = self.scale(point)
         if variance <= 0:
             return np.inf
-        return 0.5 * (
+        cost: float = 0.5 * (
             (problem.n - problem.p) * (np.log(2 * np.pi * variance) + 1)
             + problem.log_det_unpenalised
             + point.log_det_schur
@@ -64,6 +64,7 @@ class Reml(Criterion):
             - problem.log_det_design
             - problem.log_weights
         )
+        return cost
 
     def reported(self, point: Point) -> float:
         return -self.cost(point)
@@ -145,12 +146,13 @@ class Gcv(Criterion):
             + 2 * both * point.block_sums(point.inverse, point.inverse)
             - 2 * both * point.block_sums(point.inverse, smoothed)
         )
-        return (
+        hessian: FloatArray = (
             dd_deviance / deviance
             - np.outer(d_deviance, d_deviance) / deviance**2
             + 2 * dd_tau / left
             + 2 * np.outer(d_tau, d_tau) / left**2
         )
+        return hessian
 
 
 CRITERIA: dict[str, Criterion] = {c.name: c for c in (Reml(), Gcv())}

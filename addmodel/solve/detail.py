@@ -7,6 +7,8 @@ the residuals still hold waves finer than those kept.
 
 from __future__ import annotations
 
+from itertools import pairwise
+
 import numpy as np
 import scipy.stats
 
@@ -83,7 +85,7 @@ def left_over(
     edges = [space.size]
     while edges[-1] < len(squares):
         edges.append(int(np.ceil(GROWTH * edges[-1])))
-    bands = list(zip(edges[:-1], edges[1:], strict=True))
+    bands = list(pairwise(edges))
     for start, stop in bands:
         band = squares[start:stop]
         if len(band) and scipy.stats.chi2.sf(band.sum(), len(band)) < LEVEL / len(bands):

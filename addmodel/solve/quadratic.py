@@ -9,11 +9,13 @@ disjoint ridges, criterion, gradient and Hessian need R only block by block.
 from __future__ import annotations
 
 from collections.abc import Sequence
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
+from functools import cached_property
+from itertools import pairwise
 
 import numpy as np
 import scipy.linalg
-from scipy.linalg.lapack import dpotrf, dpotri
+from scipy.linalg.lapack import dpotrf, dpotri, dpotrs
 
 from addmodel.rows.base import Sums
 from addmodel.spaces.base import FloatArray
@@ -70,17 +72,33 @@ class Problem:
             n=n,
         )
 
-    @property
+    @cached_property
     def slices(self) -> list[slice]:
         """Each block's place among the penalised coefficients."""
         ends = np.cumsum([0, *self.sizes])
-        return [slice(int(a), int(b)) for a, b in zip(ends[:-1], ends[1:], strict=True)]
+        return [slice(int(a), int(b)) for a, b in pairwise(ends)]
 
     def active(self, smoothing: FloatArray) -> tuple[list[int], IndexArray]:
         """Blocks with a finite smoothing parameter, and the indices of their coefficients."""
         blocks = [j for j, value in enumerate(smoothing) if np.isfinite(value)]
         index = [np.arange(self.slices[j].start, self.slices[j].stop) for j in blocks]
         return blocks, np.concatenate(index) if index else np.empty(0, dtype=np.int64)
+
+    def leading(self, counts: Sequence[int]) -> Problem:
+        """The problem with only the first functions of each block, for a quick look.
+
+        Costs and smoothing parameters are those of the smaller model; its coefficients are not used.
+        """
+        index = np.concatenate(
+            [np.arange(s.start, s.start + k) for s, k in zip(self.slices, counts, strict=True)]
+        )
+        return replace(
+            self,
+            sizes=tuple(counts),
+            schur=self.schur[np.ix_(index, index)],
+            origin=self.origin[index],
+            pull=self.pull[index],
+        )
 
     def at(self, smoothing: FloatArray) -> Point:
         """Solve at smoothing parameters λ (one a block; infinite: the block is held at zero)."""
@@ -91,19 +109,17 @@ class Problem:
         # About the sweep's own coefficients, so that near them the deviance keeps its digits.
         base += float(ridge @ start**2)
         pull = pull - ridge * start
-        matrix = self.schur[np.ix_(index, index)]
-        matrix[np.diag_indices_from(matrix)] += ridge
         if len(index) == 0:
-            return Point(self, smoothing, blocks, ridge, index, matrix, pull, 0.0, base)
-        factor, info = dpotrf(matrix, lower=1, overwrite_a=0, clean=1)
+            return Point(self, smoothing, blocks, ridge, index, np.empty((0, 0)), pull, base)
+        every = len(index) == len(self.origin)
+        matrix = self.schur.copy() if every else self.schur[np.ix_(index, index)]
+        matrix[np.diag_indices_from(matrix)] += ridge
+        factor, info = dpotrf(matrix, lower=1, clean=1)
         if info != 0:
             raise np.linalg.LinAlgError("S + Λ is not positive definite")
-        inverse, _ = dpotri(factor, lower=1)
-        inverse = np.tril(inverse) + np.tril(inverse, -1).T
-        step = scipy.linalg.cho_solve((factor, True), pull, check_finite=False)
-        log_det = 2 * float(np.log(np.diag(factor)).sum())
+        step, _ = dpotrs(factor, pull, lower=1)
         low = base - float(pull @ step)
-        return Point(self, smoothing, blocks, ridge, index, inverse, start + step, log_det, low)
+        return Point(self, smoothing, blocks, ridge, index, factor, start + step, low)
 
     def started(self, index: IndexArray) -> tuple[FloatArray, FloatArray, float]:
         """Origin, pull and base with the coefficients outside `index` moved to zero."""
@@ -125,16 +141,30 @@ class Point:
     blocks: list[int]  # those with finite λ
     ridge: FloatArray  # (k,) λ of each active coefficient
     index: IndexArray
-    inverse: FloatArray  # (k, k) R
+    factor: FloatArray  # (k, k) lower Cholesky factor of S + Λ
     u: FloatArray  # (k,)
-    log_det_schur: float
     penalised_deviance: float  # D(β̂) + Σ λ ‖u‖², the minimum
 
     @property
+    def log_det_schur(self) -> float:
+        """log|S + Λ|."""
+        return 2 * float(np.log(np.diag(self.factor)).sum())
+
+    @cached_property
+    def inverse(self) -> FloatArray:
+        """R = (S + Λ)⁻¹ (k, k); a criterion's value alone does not need it."""
+        if not len(self.u):
+            return np.empty((0, 0))
+        half, _ = dpotri(self.factor, lower=1)
+        inverse: FloatArray = half + half.T
+        inverse[np.diag_indices_from(inverse)] /= 2
+        return inverse
+
+    @cached_property
     def places(self) -> list[slice]:
         """Each active block's place in `inverse` and `u`."""
         ends = np.cumsum([0, *(self.problem.sizes[j] for j in self.blocks)])
-        return [slice(int(a), int(b)) for a, b in zip(ends[:-1], ends[1:], strict=True)]
+        return [slice(int(a), int(b)) for a, b in pairwise(ends)]
 
     @property
     def roughness(self) -> FloatArray:

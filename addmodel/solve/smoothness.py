@@ -16,10 +16,16 @@ import numpy as np
 import scipy.optimize
 
 from addmodel.solve.criteria import Criterion
-from addmodel.solve.quadratic import Point, Problem
+from addmodel.solve.quadratic import IndexArray, Point, Problem
 from addmodel.spaces.base import FloatArray
 
 STEPS = 100
+EXACTLY = 1e-10
+"""Largest gradient at the optimum, as a part of the cost."""
+ROUGHLY = 1e-5
+"""The same while starts are compared."""
+NEAR = 1.5
+"""A place closer than this to the present one, in log λ, need not be looked at."""
 LONGEST_STEP = 4.0
 """In log λ: a quadratic says little farther off than that."""
 GONE = 0.02
@@ -62,7 +68,7 @@ def choose(
     fixed: Sequence[float | None],
     degrees: Sequence[float | None],
 ) -> Smoothness:
-    """The smoothing parameters that the criterion prefers.
+    """The smoothing parameters that the criterion prefers, near enough for `newton_from`.
 
     Parameters
     ----------
@@ -80,10 +86,11 @@ def choose(
     if not targets:
         return choose_free(problem, criterion, given)
     for j, target in targets.items():
-        given[j] = ridge_for(np.diag(problem.schur)[problem.slices[j]], target)
+        given[j] = ridges_for(problem, j, [target])[0]
     for _ in range(50):
         # The others at their best for these, then these for the others, until nothing moves.
         found = choose_free(problem, criterion, given)
+        found = newton_from(found, problem, criterion, [bool(f) for f in np.isnan(given)])
         before = given.copy()
         smoothing = found.point.smoothing.copy()
         for j, target in targets.items():
@@ -109,71 +116,102 @@ def ridge_reaching(problem: Problem, smoothing: FloatArray, block: int, target: 
 
 
 def choose_free(problem: Problem, criterion: Criterion, given: FloatArray) -> Smoothness:
-    """As `choose`; `given` holds NaN where a smoothing parameter is to be chosen."""
+    """The optimum, nearly (see ROUGHLY); `given` holds NaN where a parameter is to be chosen."""
     free = np.flatnonzero(np.isnan(given))
     bounds = Bounds.of(problem)
     if len(free) == 0:
         return _result(problem.at(given), criterion, free, bounds, 0, True)
+    quick, begin = quick_look(problem, free, given)
     best: Smoothness | None = None
     steps = 0
-    for start in starts(problem, free):
-        smoothing = given.copy()
-        smoothing[free] = start[free]
-        found = newton(problem, criterion, smoothing, free, bounds)
+    for start in begin:
+        known = None if best is None else best.point.smoothing
+        found = newton(quick, criterion, start, free, Bounds.of(quick), ROUGHLY, known)
         steps += found.steps
         if best is None or criterion.cost(found.point) < criterion.cost(best.point) - 1e-9:
             best = found
     assert best is not None
+    best = newton(problem, criterion, best.point.smoothing, free, bounds, ROUGHLY)
+    steps += best.steps - 1
     for _ in range(2 * len(free) + 2):
-        better = look_around(best.point, criterion, free, bounds)
+        better = look_around(best.point, criterion, free)
         if better is None:
             break
-        found = newton(problem, criterion, better, free, bounds)
+        found = newton(problem, criterion, better, free, bounds, ROUGHLY)
         steps += found.steps
         if criterion.cost(found.point) >= criterion.cost(best.point) - 1e-9:
             break
         best = found
-    return Smoothness(best.point, steps, best.settled, best.gradient, best.at_zero)
+    return replace(best, steps=steps)
 
 
 def newton_from(
     found: Smoothness, problem: Problem, criterion: Criterion, free: Sequence[bool]
 ) -> Smoothness:
-    """Newton once more from a solution already found, on sums taken anew about it."""
+    """Newton to the end from a solution nearly found, on sums taken anew about it."""
     moving = np.flatnonzero(free)
     again = newton(problem, criterion, found.point.smoothing, moving, Bounds.of(problem))
     return replace(again, steps=found.steps + again.steps - 1)
 
 
-def starts(problem: Problem, free: np.ndarray) -> list[FloatArray]:
-    """Common starts: a few effective degrees of freedom a block, and most of them all."""
-    diagonal = np.diag(problem.schur)
-    result = []
-    for few, share in ((3.0, 0.25), (np.inf, 0.6)):
-        lam = np.ones(len(problem.sizes))
-        for j in free:
-            d = diagonal[problem.slices[j]]
-            lam[j] = ridge_for(d, min(few, share * len(d)))
-        result.append(lam)
-    return result
+def quick_look(
+    problem: Problem, free: IndexArray, given: FloatArray
+) -> tuple[Problem, list[FloatArray]]:
+    """A smaller problem to compare starts on, and two starts: each block at the best place of its
+    own, and all with little smoothing.
+
+    The first takes every block as if it were alone, with its functions uncorrelated: their pulls v
+    and curvatures d then give the profiled REML cost over the whole range of λ at once,
+    ½[(n − p) log(D₀ − Σ v²/(d + λ)) + Σ log(1 + d/λ)]. The smaller problem leaves out the functions
+    that would be shrunk by 99.9 % there; the optimum is then sought with all.
+    """
+    own, rough = given.copy(), given.copy()
+    counts = list(problem.sizes)
+    diagonal = np.maximum(np.diag(problem.schur), np.finfo(float).tiny)
+    for j in free:
+        place, size = problem.slices[j], problem.sizes[j]
+        lam = ridges_for(problem, j, np.geomspace(0.05, 0.8 * size, 24))
+        d, v = diagonal[place], problem.pull[place] + diagonal[place] * problem.origin[place]
+        left = problem.base - (v**2 / (d + lam[:, None])).sum(axis=1)
+        left = np.maximum(left, 1e-12 * abs(problem.base))
+        cost = (problem.n - problem.p) * np.log(left) + np.log1p(d / lam[:, None]).sum(axis=1)
+        own[j] = lam[cost.argmin()]
+        used = np.flatnonzero(d > 1e-3 * own[j])
+        counts[j] = min(size, max(20, int(used.max(initial=0)) + 1))
+        rough[j] = ridges_for(problem, j, [0.6 * counts[j]])[0]
+    smaller = sum(counts) < 0.7 * sum(problem.sizes)
+    return (problem.leading(counts) if smaller else problem), [own, rough]
 
 
-def ridge_for(d: FloatArray, target: float) -> float:
-    """λ with Σ d/(d + λ) = target, by bisection in log λ."""
-    low, high = np.log(d.min() + 1e-300) - 40, np.log(d.max() + 1e-300) + 40
-    for _ in range(60):
+def ridges_for(problem: Problem, block: int, targets: Sequence[float]) -> FloatArray:
+    """λ that give a block alone about these effective degrees of freedom: Σ d/(d + λ) = target,
+
+    d the block's own curvatures; by bisection in log λ.
+    """
+    d = np.maximum(np.diag(problem.schur)[problem.slices[block]], np.finfo(float).tiny)
+    low = np.full(len(targets), np.log(d.min()) - 20)
+    high = np.full(len(targets), np.log(d.max()) + 20)
+    for _ in range(25):
         middle = (low + high) / 2
-        if np.sum(d / (d + np.exp(middle))) > target:
-            low = middle
-        else:
-            high = middle
-    return float(np.exp((low + high) / 2))
+        rough = (d / (d + np.exp(middle)[:, None])).sum(axis=1) > targets
+        low, high = np.where(rough, middle, low), np.where(rough, high, middle)
+    return np.asarray(np.exp((low + high) / 2), dtype=np.float64)
 
 
 def newton(
-    problem: Problem, criterion: Criterion, smoothing: FloatArray, free: np.ndarray, bounds: Bounds
+    problem: Problem,
+    criterion: Criterion,
+    smoothing: FloatArray,
+    free: IndexArray,
+    bounds: Bounds,
+    tolerance: float = EXACTLY,
+    known: FloatArray | None = None,
 ) -> Smoothness:
-    """Newton's method with a positive-definite safeguard and step-halving, from `smoothing`."""
+    """Newton's method with a positive-definite safeguard and step-halving, from `smoothing`.
+
+    It ends when the gradient is below `tolerance` of the cost, or early when it has come close to a
+    `known` optimum: there it would only arrive again.
+    """
     point = problem.at(smoothing)
     cost = criterion.cost(point)
     settled = False
@@ -188,8 +226,10 @@ def newton(
         rho = np.log(point.smoothing[names])
         gradient = criterion.gradient(point)[moving]
         pinned = (rho <= bounds.lower[names] + 1e-9) & (gradient > 0)
-        if np.abs(gradient[~pinned]).max(initial=0.0) < 1e-10 * max(1.0, abs(cost)):
+        if np.abs(gradient[~pinned]).max(initial=0.0) < tolerance * max(1.0, abs(cost)):
             settled = True
+            break
+        if known is not None and _close(point.smoothing, known):
             break
         hessian = criterion.hessian(point)[np.ix_(moving, moving)]
         step = np.zeros(len(names))
@@ -212,6 +252,14 @@ def newton(
     return _result(point, criterion, free, bounds, steps, settled)
 
 
+def _close(smoothing: FloatArray, known: FloatArray) -> bool:
+    """Whether smoothing parameters are in the near neighbourhood of known ones."""
+    if (np.isinf(smoothing) != np.isinf(known)).any():
+        return False
+    finite = np.isfinite(smoothing)
+    return bool(np.abs(np.log(smoothing[finite] / known[finite])).max(initial=0.0) < 0.7)
+
+
 def descent(gradient: FloatArray, hessian: FloatArray) -> FloatArray:
     """Newton's step with the Hessian's eigenvalues made positive, no longer than LONGEST_STEP."""
     values, vectors = np.linalg.eigh(hessian)
@@ -224,7 +272,7 @@ def descent(gradient: FloatArray, hessian: FloatArray) -> FloatArray:
 
 
 def hold_at_infinity(
-    point: Point, cost: float, criterion: Criterion, free: np.ndarray
+    point: Point, cost: float, criterion: Criterion, free: IndexArray
 ) -> tuple[Point, float]:
     """Move blocks that are all but gone to λ = ∞, where that does not cost anything."""
     while True:
@@ -247,18 +295,18 @@ def hold_at_infinity(
             return point, cost
 
 
-def look_around(
-    point: Point, criterion: Criterion, free: np.ndarray, bounds: Bounds
-) -> FloatArray | None:
+def look_around(point: Point, criterion: Criterion, free: IndexArray) -> FloatArray | None:
     """Each smoothing parameter alone over its whole range: a better place, or None."""
-    best = criterion.cost(point) - 1e-7 * max(1.0, abs(criterion.cost(point)))
+    now = criterion.cost(point)
+    best = now - 1e-7 * max(1.0, abs(now))
     place: FloatArray | None = None
     for j in free:
-        diagonal = np.diag(point.problem.schur)[point.problem.slices[j]]
-        size = len(diagonal)
-        targets = [t for t in (0.1, 1.0, 4.0, 12.0) if t < 0.5 * size] + [0.6 * size, 0.9 * size]
-        trials = [np.inf] + [ridge_for(diagonal, t) for t in targets]
-        for lam in trials:
+        size, here = point.problem.sizes[j], point.smoothing[j]
+        targets = [0.3, min(2.0, 0.3 * size), min(8.0, 0.5 * size), 0.6 * size]
+        for lam in (np.inf, *ridges_for(point.problem, j, targets)):
+            both = np.isfinite([lam, here])
+            if lam == here or (both.all() and abs(np.log(lam / here)) < NEAR):
+                continue
             trial = point.smoothing.copy()
             trial[j] = lam
             value = criterion.cost(point.problem.at(trial))
@@ -270,7 +318,7 @@ def look_around(
 def _result(
     point: Point,
     criterion: Criterion,
-    free: np.ndarray,
+    free: IndexArray,
     bounds: Bounds,
     steps: int,
     settled: bool,

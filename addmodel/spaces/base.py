@@ -14,7 +14,7 @@ from __future__ import annotations
 
 from abc import ABC, abstractmethod
 from dataclasses import dataclass, replace
-from typing import Self
+from typing import Any, Self
 
 import numpy as np
 import numpy.typing as npt
@@ -46,7 +46,7 @@ class Space(ABC):
         """Names of the columns of N, in order."""
 
     @abstractmethod
-    def unpenalised(self, x: npt.NDArray[np.generic]) -> FloatArray:
+    def unpenalised(self, x: npt.NDArray[Any]) -> FloatArray:
         """Columns of N at x, shape (n, len(unpenalised_names))."""
 
     @property
@@ -59,11 +59,11 @@ class Space(ABC):
         """Number of penalised functions that the distinct points allow."""
         return 0
 
-    def penalised(self, x: npt.NDArray[np.generic]) -> FloatArray:
+    def penalised(self, x: npt.NDArray[Any]) -> FloatArray:
         """Columns of P at x, shape (n, size)."""
         return np.empty((len(x), 0))
 
-    def outside(self, x: npt.NDArray[np.generic]) -> BoolArray:
+    def outside(self, x: npt.NDArray[Any]) -> BoolArray:
         """Which rows lie outside the data the space was laid on, shape (n,)."""
         return np.zeros(len(x), dtype=bool)
 
@@ -104,7 +104,7 @@ class Penalised(Space):
         return replace(self, size_kept=min(size, len(self.gamma), self.most))
 
     @abstractmethod
-    def scaled(self, x: npt.NDArray[np.generic]) -> FloatArray:
+    def scaled(self, x: npt.NDArray[Any]) -> FloatArray:
         """The scaled covariate t at x, shape (n,)."""
 
     @abstractmethod
@@ -116,7 +116,7 @@ class Penalised(Space):
         (`cycle`), the k-th with about k half waves.
         """
 
-    def penalised(self, x: npt.NDArray[np.generic]) -> FloatArray:
+    def penalised(self, x: npt.NDArray[Any]) -> FloatArray:
         t = self.scaled(x)
         k = self.size
         inside = np.clip(t, self.knots[0], self.knots[-1])
@@ -198,7 +198,8 @@ def demmler_reinsch(
 def support(t: FloatArray, weights: FloatArray) -> tuple[FloatArray, FloatArray]:
     """Distinct points, ascending, and the weight summed at each."""
     points, where = np.unique(t, return_inverse=True)
-    return points, np.bincount(where, weights, minlength=len(points))
+    summed: FloatArray = np.bincount(where, weights, minlength=len(points)).astype(np.float64)
+    return points, summed
 
 
 def choose_knots(points: FloatArray, weights: FloatArray, count: int) -> FloatArray:
@@ -224,4 +225,5 @@ def choose_knots(points: FloatArray, weights: FloatArray, count: int) -> FloatAr
     cap = caps[fits[0]] if len(fits) else descending[count - 2]
     along = np.concatenate([[0.0], np.cumsum(np.minimum(phase / cap, 1.0))])
     chosen = np.searchsorted(along, np.linspace(0.0, along[-1], count) - 1e-9)
-    return points[np.unique(np.clip(np.concatenate([[0], chosen, [m - 1]]), 0, m - 1))]
+    knots: FloatArray = points[np.unique(np.clip([0, *chosen, m - 1], 0, m - 1))]
+    return knots

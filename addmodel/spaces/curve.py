@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 from dataclasses import dataclass
+from typing import Any
 
 import numpy as np
 import numpy.typing as npt
@@ -27,9 +28,7 @@ class Curve(Penalised):
     """Weighted mean of x in the data: the straight line is x − centre."""
 
     @classmethod
-    def lay(
-        cls, key: str, x: FloatArray, weights: FloatArray, size: int, cap: int | None
-    ) -> Curve:
+    def lay(cls, key: str, x: FloatArray, weights: FloatArray, size: int, cap: int | None) -> Curve:
         """Lay the space on the data.
 
         Parameters
@@ -46,8 +45,8 @@ class Curve(Penalised):
         low, high = float(x.min()), float(x.max())
         points, omega = support((x - low) / (high - low), weights)
         size = min(size, len(points) - 2)
-        # Two knots a function: the roughness of the last one kept is then good to about 1.5 %.
-        knots = choose_knots(points, omega, max(120, 2 * size))
+        # 1.6 knots a function: the roughness of the last one kept is then good to a few per cent.
+        knots = choose_knots(points, omega, max(96, int(1.6 * size)))
         value, slope = bent(knots)
         at_points = hermite(knots, points) @ np.concatenate([value, slope])
         line = np.stack([np.ones_like(points), points], axis=1)
@@ -70,13 +69,13 @@ class Curve(Penalised):
     def unpenalised_names(self) -> tuple[str, ...]:
         return (self.key,)
 
-    def unpenalised(self, x: npt.NDArray[np.generic]) -> FloatArray:
+    def unpenalised(self, x: npt.NDArray[Any]) -> FloatArray:
         return np.asarray(x, dtype=np.float64)[:, None] - self.centre
 
-    def scaled(self, x: npt.NDArray[np.generic]) -> FloatArray:
+    def scaled(self, x: npt.NDArray[Any]) -> FloatArray:
         return (np.asarray(x, dtype=np.float64) - self.low) / self.length
 
-    def outside(self, x: npt.NDArray[np.generic]) -> npt.NDArray[np.bool_]:
+    def outside(self, x: npt.NDArray[Any]) -> npt.NDArray[np.bool_]:
         t = self.scaled(x)
         return (t < 0) | (t > 1)
 

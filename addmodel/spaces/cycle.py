@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 from dataclasses import dataclass
+from typing import Any
 
 import numpy as np
 import numpy.typing as npt
@@ -42,7 +43,7 @@ class Cycle(Penalised):
         points, omega = support(phase(x, period), weights)
         size = min(size + size % 2, len(points) - 1)  # waves come in pairs: keep them together
         turn = np.append(points, points[0] + 1.0)
-        knots = choose_knots(turn, np.append(omega, omega[0]), max(120, 2 * size))
+        knots = choose_knots(turn, np.append(omega, omega[0]), max(96, int(1.6 * size)))
         value, slope = periodic(knots)
         at_points = hermite(knots, points) @ np.concatenate([value, slope])
         constant = np.ones((len(points), 1))
@@ -65,10 +66,10 @@ class Cycle(Penalised):
     def unpenalised_names(self) -> tuple[str, ...]:
         return ()
 
-    def unpenalised(self, x: npt.NDArray[np.generic]) -> FloatArray:
+    def unpenalised(self, x: npt.NDArray[Any]) -> FloatArray:
         return np.empty((len(x), 0))
 
-    def scaled(self, x: npt.NDArray[np.generic]) -> FloatArray:
+    def scaled(self, x: npt.NDArray[Any]) -> FloatArray:
         t = phase(np.asarray(x, dtype=np.float64), self.period)
         return np.where(t < self.knots[0], t + 1.0, t)
 

@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 from dataclasses import dataclass
+from typing import Any
 
 import numpy as np
 import numpy.typing as npt
@@ -23,7 +24,7 @@ class Levels(Space):
     def lay(
         cls,
         key: str,
-        codes: npt.NDArray[np.generic],
+        codes: npt.NDArray[Any],
         weights: FloatArray,
         labels: tuple[str, ...],
         base: int,
@@ -39,10 +40,10 @@ class Levels(Space):
             f"{self.key}: {label}" for i, label in enumerate(self.labels) if i != self.base
         )
 
-    def unpenalised(self, x: npt.NDArray[np.generic]) -> FloatArray:
+    def unpenalised(self, x: npt.NDArray[Any]) -> FloatArray:
         """Indicator columns for codes x (n,); a code below zero stands for an average level."""
         codes = np.asarray(x, dtype=np.int64)
         full = codes[:, None] == np.arange(len(self.labels))
-        columns = np.delete(full.astype(np.float64), self.base, axis=1)
+        columns: FloatArray = np.delete(full.astype(np.float64), self.base, axis=1)
         columns[codes < 0] = self.means
         return columns

@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 from dataclasses import dataclass
+from typing import Any
 
 import numpy as np
 import numpy.typing as npt
@@ -26,8 +27,9 @@ class Line(Space):
     def unpenalised_names(self) -> tuple[str, ...]:
         return (self.key,)
 
-    def unpenalised(self, x: npt.NDArray[np.generic]) -> FloatArray:
+    def unpenalised(self, x: npt.NDArray[Any]) -> FloatArray:
         return np.asarray(x, dtype=np.float64)[:, None]
 
-    def outside(self, x: npt.NDArray[np.generic]) -> BoolArray:
-        return np.asarray((x < self.low) | (x > self.high), dtype=bool)
+    def outside(self, x: npt.NDArray[Any]) -> BoolArray:
+        beyond: BoolArray = (x < self.low) | (x > self.high)
+        return beyond

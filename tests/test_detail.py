@@ -1,0 +1,90 @@
+"""Automatic detail: never a wrong number of functions in silence."""
+
+import numpy as np
+import pytest
+
+import addmodel as am
+from addmodel.solve.detail import left_over
+from addmodel.spaces.curve import Curve
+from addmodel.spaces.cycle import Cycle
+from tests.exact import spacings
+
+
+def waves_in_noise(cycles: int, n: int, seed: int) -> dict[str, np.ndarray]:
+    rng = np.random.default_rng(seed)
+    x = rng.uniform(size=n)
+    return {"x": x, "y": np.sin(2 * np.pi * cycles * x) + rng.standard_normal(n)}
+
+
+@pytest.mark.parametrize(("cycles", "n"), [(6, 1000), (14, 7305), (20, 7305), (40, 7305)])
+def test_fast_waves_are_found(cycles, n):
+    data = waves_in_noise(cycles, n, seed=cycles)
+    fit = am.fit("y ~ curve(x)", data)
+    wave = np.sin(2 * np.pi * cycles * data["x"])
+    assert np.corrcoef(fit.fitted, wave)[0, 1] > 0.9
+    assert fit.estimate.detail_confirmed == (True,)
+    assert "detail was confirmed" in fit.summary().words
+
+
+def random_model(seed: int) -> dict[str, np.ndarray]:
+    """One curve, from gentle to bumpy, with uneven covariates."""
+    rng = np.random.default_rng(seed)
+    n = int(rng.integers(250, 900))
+    x = [rng.uniform(size=n), rng.standard_normal(n), np.exp(rng.standard_normal(n))][seed % 3]
+    t = (np.argsort(np.argsort(x)) / n) if seed % 2 else (x - x.min()) / np.ptp(x)
+    signal = sum(
+        rng.standard_normal() / k * np.sin(np.pi * k * t + rng.uniform(0, 6)) for k in range(1, 25)
+    )
+    return {"x": x, "y": signal + rng.uniform(0.05, 1) * rng.standard_normal(n)}
+
+
+@pytest.mark.parametrize("seed", range(3))
+def test_automatic_detail_agrees_with_all_functions(seed):
+    data = random_model(seed)
+    fit, full = am.fit("y ~ curve(x)", data), am.fit('y ~ curve(x, detail="all")', data)
+    error = full.predict(data, interval=0.95)["std_error"].to_numpy()
+    assert (np.abs(fit.fitted - full.fitted) < 0.05 * error).all()
+
+
+def test_binding_cap_is_said():
+    data = waves_in_noise(6, 1000, seed=3)
+    fit = am.fit("y ~ curve(x, detail=8)", data)
+    assert fit.estimate.detail_confirmed == (False,)
+    assert "curve(x) is bound by detail=" in fit.summary().words
+    free = am.fit("y ~ curve(x, detail=200)", data)
+    assert free.estimate.detail_confirmed == (True,)
+
+
+@pytest.mark.parametrize("name", ["random", "exponential", "pairs 1e-9 apart"])
+@pytest.mark.parametrize("kind", [Curve, Cycle])
+def test_nothing_left_over_in_pure_noise(kind, name):
+    """False alarms at the level asked for: 0.001 for all bands together."""
+    x = spacings(1000)[name]
+    weights = np.random.default_rng(1).uniform(0.5, 2, len(x))
+    if kind is Curve:
+        space = Curve.lay("x", x, weights, 60, None)
+    else:
+        space = Cycle.lay("x", x, weights, 60, None, 1.0)
+    columns = np.column_stack([np.ones(len(x)), space.unpenalised(x), space.penalised(x)])
+    root = np.sqrt(weights)[:, None]
+    basis = np.linalg.qr(root * columns)[0]
+    rng = np.random.default_rng(4)
+    hits = 0
+    for _ in range(300):
+        noise = rng.standard_normal(len(x))
+        residuals = (noise - basis @ (basis.T @ noise)) / root[:, 0]
+        hits += left_over(space, x, residuals, weights, 1.0) is not None
+    assert hits <= 3  # 0.3 expected
+
+
+@pytest.mark.parametrize("kind", [Curve, Cycle])
+def test_what_is_left_over_is_found_in_its_band(kind):
+    n = 3000
+    rng = np.random.default_rng(9)
+    x = np.sort(rng.uniform(size=n))
+    if kind is Curve:
+        space = Curve.lay("x", x, np.ones(n), 60, None)
+    else:
+        space = Cycle.lay("x", x, np.ones(n), 60, None, 1.0)
+    residuals = 0.3 * np.sin(2 * np.pi * 55 * x) + rng.standard_normal(n)  # 110 half waves
+    assert left_over(space, x, residuals, np.ones(n), 1.0) == 135  # the band from 90 to 135
