@@ -23,7 +23,7 @@ from addmodel.errors import FormulaError, ModelError, nearest
 from addmodel.formula import Factor, Model, Term
 from addmodel.spaces.base import BoolArray, FloatArray, Penalised, Space
 from addmodel.spaces.curve import Curve
-from addmodel.spaces.cycle import CALENDAR, Cycle
+from addmodel.spaces.cycle import Cycle
 from addmodel.spaces.levels import Levels
 from addmodel.spaces.line import Line
 

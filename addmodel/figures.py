@@ -8,7 +8,6 @@ of the data; levels are rows with their share of the data in the margin. Nothing
 from __future__ import annotations
 
 import importlib
-import os
 import textwrap
 from collections.abc import Iterator, Sequence
 from contextlib import contextmanager
@@ -18,6 +17,8 @@ from typing import TYPE_CHECKING, Any, Literal, cast
 
 import numpy as np
 import numpy.typing as npt
+
+from addmodel.files import replacing
 
 if TYPE_CHECKING:  # matplotlib is slow to import, and needed for drawing alone
     from matplotlib.axes import Axes
@@ -144,13 +145,9 @@ def save(figure: Figure, stem: Path) -> list[Path]:
     written = []
     for ending, metadata in (("png", {}), ("pdf", {"CreationDate": None})):
         path = stem.with_name(f"{stem.name}.{ending}")  # a stem may contain dots
-        part = path.with_name(f".{path.name}.{os.getpid()}.part")
-        try:
-            with _look():
-                figure.savefig(part, format=ending, dpi=200, metadata=metadata)
-            written.append(part.replace(path))
-        finally:
-            part.unlink(missing_ok=True)
+        with replacing(path) as temporary, _look():
+            figure.savefig(temporary, format=ending, dpi=200, metadata=metadata)
+        written.append(path)
     return written
 
 
@@ -247,7 +244,7 @@ def _ticks(panel: Panel, ax: Axes, width: float) -> float:
         ax.ticklabel_format(axis="x", useOffset=False)
     else:
         dates: Any = importlib.import_module("matplotlib.dates")  # its functions have no types
-        locator = dates.AutoDateLocator(minticks=3, maxticks=6 if width > 55.0 else 4)
+        locator = dates.AutoDateLocator(minticks=3, maxticks=6)
         ax.xaxis.set_major_locator(locator)
         ax.xaxis.set_major_formatter(dates.ConciseDateFormatter(locator))
         return float(dates.date2num(np.datetime64("1970-01-01")))
