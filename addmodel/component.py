@@ -2,8 +2,8 @@
 
 The columns of the whole model are the intercept, the unpenalised columns component by component,
 then the penalised blocks; each block carries one ridge penalty. Inside the program the unpenalised
-columns are standardised (so that sums over rows keep their digits); `Design.reporting` leads back to
-the columns as written.
+columns are standardised (so that sums over rows keep their digits); `Design.reporting` leads back
+to the columns as written.
 """
 
 from __future__ import annotations

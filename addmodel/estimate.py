@@ -121,7 +121,7 @@ def estimate(
     FormulaError, ModelError
         Where the model has no meaning on these data.
     """
-    # At a few hundred columns two BLAS threads are slower than one, and much slower on a busy machine.
+    # At a few hundred columns two BLAS threads are slower than one, most of all on a busy machine.
     with _threads().limit(limits=1, user_api="blas"):
         return _estimate(model, table, outcome, criterion, arguments, progress)
 
@@ -283,7 +283,7 @@ def _present(design: Design) -> list[int]:
 def _check_outcome(table: Table) -> None:
     if np.ptp(table.outcome - table.offset) == 0:
         raise ModelError(
-            f"{table.outcome_name} has the same value in all rows used: there is nothing to explain."
+            f"{table.outcome_name} has the same value in all rows used: nothing is left to explain."
         )
 
 
@@ -306,13 +306,13 @@ def _cautions(design: Design, smoothness: Smoothness) -> list[str]:
         names = [design.components[j].name for j in design.block_owners]
         worst = names[int(np.abs(smoothness.gradient).argmax())]
         found.append(
-            f"The choice of smoothness did not settle, most of all for {worst}. Treat its curve and "
-            "its degrees of freedom as approximate; look whether it competes with another component."
+            f"The choice of smoothness did not settle, most of all for {worst}. Treat its curve "
+            "and its degrees of freedom as approximate; see if it competes with another component."
         )
     for j in smoothness.at_zero:
         name = design.components[design.block_owners[j]].name
         found.append(
-            f"The smoothing parameter of {name} ran to zero: the curve follows the data as closely "
+            f"The smoothing parameter of {name} ran to zero: it follows the data as closely "
             "as its functions allow. Look for repeated rows or an outcome without noise."
         )
     for component in design.components:

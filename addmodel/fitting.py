@@ -1,4 +1,4 @@
-"""The verb `fit` and the fitted model: its methods are the table of contents of what can be asked."""
+"""The verb `fit`, and the fitted model: its methods are the contents of what can be asked."""
 
 from __future__ import annotations
 
@@ -69,7 +69,7 @@ def fit(
     criterion : {"reml", "gcv"}
         How smoothness is chosen: restricted maximum likelihood, or generalised cross-validation.
     missing : {"drop", "error"}
-        What to do with rows that lack a value that is used. Dropped rows are counted in the summary.
+        What to do with rows that lack a used value. Dropped rows are counted in the summary.
     progress : callable, optional
         Called with a short text as the work goes on.
 
@@ -214,7 +214,7 @@ class Fit:
 
     @property
     def smoothing(self) -> pd.Series[float]:
-        """Smoothing parameter of each penalised block, by component; infinite where it ran there."""
+        """Smoothing parameter of each penalised block; infinite where it ran there."""
         design = self.estimate.design
         names = [design.components[j].name for j in design.block_owners]
         return pd.Series(self.estimate.smoothing, index=pd.Index(names, name="component"))
@@ -316,7 +316,7 @@ def load(path: str | Path) -> Fit:
     Raises
     ------
     DataError
-        If the file is missing, not a saved fit, damaged, or of a newer format. No code in it is run.
+        If the file is missing, not a saved fit, damaged, or newer. No code in it is run.
     """
     return Fit(store.load(Path(path)))
 

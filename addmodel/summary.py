@@ -118,7 +118,7 @@ def _words(estimate: Estimate) -> str:
         sentences.append(
             "The detail was confirmed: more functions would change nothing."
             if not unsure
-            else f"The detail of {', '.join(unsure)} is bound by detail=: more functions would be used."
+            else f"The detail of {', '.join(unsure)} is bound: more functions would be used."
         )
     straight = [estimate.design.components[j].name for j in bending if estimate.at_infinity(j)]
     if straight:

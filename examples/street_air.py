@@ -31,8 +31,8 @@ def main(folder: Path) -> None:
     # The same without bends: how much do the curves take away beyond straight lines?
     straight = am.fit("no2 ~ wind + temperature + time + station", readings)
     print(
-        f"\nStraight lines take away {100 * straight.deviance_reduction:.0f} % of the null deviance, "
-        f"the curves {100 * fit.deviance_reduction:.0f} %."
+        f"\nStraight lines take away {100 * straight.deviance_reduction:.0f} % of the null "
+        f"deviance, the curves {100 * fit.deviance_reduction:.0f} %."
     )
 
     # Calm against windy, at the typical value of everything else.
@@ -58,7 +58,7 @@ def main(folder: Path) -> None:
     for i, name in enumerate(["at 8:00", "at 13:00"]):
         print(
             f"Expected {name}: {mean.prediction[i]:.0f} µg/m³ ({mean.lower[i]:.0f} to "
-            f"{mean.upper[i]:.0f}); a single reading: {single.lower[i]:.0f} to {single.upper[i]:.0f}."
+            f"{mean.upper[i]:.0f}); one reading: {single.lower[i]:.0f} to {single.upper[i]:.0f}."
         )
 
     # An interval for the difference of the two, from posterior draws: they share their errors.

@@ -50,7 +50,7 @@ def test_binding_cap_is_said():
     data = waves_in_noise(6, 1000, seed=3)
     fit = am.fit("y ~ curve(x, detail=8)", data)
     assert fit.estimate.detail_confirmed == (False,)
-    assert "curve(x) is bound by detail=" in fit.summary().words
+    assert "The detail of curve(x) is bound" in fit.summary().words
     free = am.fit("y ~ curve(x, detail=200)", data)
     assert free.estimate.detail_confirmed == (True,)
 

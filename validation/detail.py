@@ -2,8 +2,8 @@
 
 Ten random models of one curve (tests/test_detail.py): the largest difference between the fit with
 automatic detail and the fit with all functions, in pointwise standard errors. Then a sine whose
-amplitude is the noise's standard deviation, 20 samples each: found means that the fitted curve has a
-correlation above 0.9 with it, by a fit that was given nothing but `y ~ curve(x)`.
+amplitude is the noise's standard deviation, 20 samples each: found means that the fitted curve has
+a correlation above 0.9 with it, by a fit that was given nothing but `y ~ curve(x)`.
 """
 
 import numpy as np

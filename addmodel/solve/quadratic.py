@@ -87,7 +87,7 @@ class Problem:
     def leading(self, counts: Sequence[int]) -> Problem:
         """The problem with only the first functions of each block, for a quick look.
 
-        Costs and smoothing parameters are those of the smaller model; its coefficients are not used.
+        Costs and smoothing parameters are the smaller model's; its coefficients are not used.
         """
         index = np.concatenate(
             [np.arange(s.start, s.start + k) for s, k in zip(self.slices, counts, strict=True)]

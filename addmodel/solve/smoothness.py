@@ -31,7 +31,7 @@ LONGEST_STEP = 4.0
 GONE = 0.02
 """Below so many effective degrees of freedom a block is tried at infinity."""
 RANGE = 1e-9
-"""λ is sought from this part of the block's smallest curvature ..., and up to its largest / RANGE."""
+"""λ is sought from RANGE · (a block's smallest curvature) to its largest / RANGE."""
 
 
 @dataclass(frozen=True)
@@ -168,7 +168,7 @@ def quick_look(
     own, rough = given.copy(), given.copy()
     counts = list(problem.sizes)
     diagonal = np.maximum(np.diag(problem.schur), np.finfo(float).tiny)
-    for j in free:
+    for j in free.tolist():
         place, size = problem.slices[j], problem.sizes[j]
         lam = ridges_for(problem, j, np.geomspace(0.05, 0.8 * size, 24))
         d, v = diagonal[place], problem.pull[place] + diagonal[place] * problem.origin[place]
@@ -183,7 +183,7 @@ def quick_look(
     return (problem.leading(counts) if smaller else problem), [own, rough]
 
 
-def ridges_for(problem: Problem, block: int, targets: Sequence[float]) -> FloatArray:
+def ridges_for(problem: Problem, block: int, targets: Sequence[float] | FloatArray) -> FloatArray:
     """λ that give a block alone about these effective degrees of freedom: Σ d/(d + λ) = target,
 
     d the block's own curvatures; by bisection in log λ.
@@ -300,7 +300,7 @@ def look_around(point: Point, criterion: Criterion, free: IndexArray) -> FloatAr
     now = criterion.cost(point)
     best = now - 1e-7 * max(1.0, abs(now))
     place: FloatArray | None = None
-    for j in free:
+    for j in free.tolist():
         size, here = point.problem.sizes[j], point.smoothing[j]
         targets = [0.3, min(2.0, 0.3 * size), min(8.0, 0.5 * size), 0.6 * size]
         for lam in (np.inf, *ridges_for(point.problem, j, targets)):

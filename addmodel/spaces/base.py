@@ -1,13 +1,13 @@
 """The contract of a space, and the Demmler–Reinsch form that every penalised space is brought to.
 
-Which space when: `line` for a number whose effect is straight, `levels` for categories, `curve` for a
-number whose effect bends, `cycle` for a number that comes round again (hour, direction, season).
+Which space when: `line` for a number whose effect is straight, `levels` for categories, `curve`
+for a number whose effect bends, `cycle` for one that comes round again (hour, direction, season).
 
 A space is *laid* on the data: over its distinct support points t_1..t_m with weights ω_l it has a
 roughness J with a known null space. The constant is dropped (the intercept has it); the rest of the
 null space is the unpenalised part N; the penalised part P has columns z_k = φ_k/√γ_k, where the φ_k
-are orthonormal in the data's weights, Σ_l ω_l φ_j φ_k / Σ ω = δ_jk, orthogonal to the null space, and
-have roughness γ_k, ascending (Demmler & Reinsch 1975, Numer. Math. 24). So J(Σ u_k z_k) = Σ u_k².
+are orthonormal in the data's weights, Σ_l ω_l φ_j φ_k / Σ ω = δ_jk, orthogonal to the null space,
+and have roughness γ_k, ascending (Demmler & Reinsch 1975, Numer. Math. 24). So J(Σ u_k z_k) = Σ u_k².
 """
 
 from __future__ import annotations
@@ -131,7 +131,7 @@ class Penalised(Space):
 
 
 def hermite(knots: FloatArray, t: FloatArray) -> scipy.sparse.csr_array:
-    """Matrix H (n, 2r) with f(t) = H [values; slopes] for a piecewise cubic f, t within the knots."""
+    """Matrix H (n, 2r): f(t) = H [values; slopes] for a piecewise cubic f, t within the knots."""
     r, n = len(knots), len(t)
     left = np.clip(np.searchsorted(knots, t, side="right") - 1, 0, r - 2)
     h = knots[left + 1] - knots[left]

@@ -1,4 +1,4 @@
-"""cycle(x, period=): the periodic cubic spline, J(f) = ∫ f''(t)² dt over one period scaled to [0, 1]."""
+"""cycle(x, period=): periodic cubic spline, J(f) = ∫ f''(t)² dt, one period scaled to [0, 1]."""
 
 from __future__ import annotations
 
