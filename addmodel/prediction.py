@@ -110,7 +110,8 @@ def new_rows(estimate: Estimate, new: object, *, unseen: str, missing: str) -> N
         first = found[0]
         raise DataError(
             f"{key} has the level '{first.label}' (row {int(first.rows[0])}, counted from 0), "
-            f"which the fit has not seen. {nearest(first.label, estimate.design.columns[key].levels)} "
+            "which the fit has not seen. "
+            f"{nearest(first.label, estimate.design.columns[key].levels)} "
             "Or write unseen='base' or unseen='average'."
         )
     if unseen == "base":

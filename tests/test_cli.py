@@ -222,7 +222,10 @@ def refused(result: Result, words: str) -> None:
 
 
 FIT_ERRORS = {
-    "unknown column": (["y ~ curve(hours)"], "^Error: .*rows.csv.*no column 'hours'. Did you.*'hour'"),
+    "unknown column": (
+        ["y ~ curve(hours)"],
+        "^Error: .*rows.csv.*no column 'hours'. Did.*'hour'",
+    ),
     "formula": (["y ~ curve(x"], r"Error: This bracket is never closed.\n    y ~ curve>>\(<<x"),
     "outcome": (["y ~ x", "--outcome", "gausian"], "outcome='gausian' is not known.*'gaussian'"),
     "few values": (["y ~ curve(k)"], r"curve\(k\) has 3 distinct values and needs at least 4"),

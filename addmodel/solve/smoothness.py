@@ -134,7 +134,7 @@ def choose_free(problem: Problem, criterion: Criterion, given: FloatArray) -> Sm
     best = newton(problem, criterion, best.point.smoothing, free, bounds, ROUGHLY)
     steps += best.steps - 1
     for _ in range(2 * len(free) + 2):
-        better = look_around(best.point, criterion, free)
+        better = look_around(best.point, quick, criterion, free)
         if better is None:
             break
         found = newton(problem, criterion, better, free, bounds, ROUGHLY)
@@ -295,23 +295,30 @@ def hold_at_infinity(
             return point, cost
 
 
-def look_around(point: Point, criterion: Criterion, free: IndexArray) -> FloatArray | None:
-    """Each smoothing parameter alone over its whole range: a better place, or None."""
-    now = criterion.cost(point)
-    best = now - 1e-7 * max(1.0, abs(now))
+def look_around(
+    point: Point, quick: Problem, criterion: Criterion, free: IndexArray
+) -> FloatArray | None:
+    """Each smoothing parameter alone over its whole range: a better place, or None.
+
+    Places with much smoothing are compared on the smaller problem, where functions are few.
+    """
+    costs = {id(p): criterion.cost(p.at(point.smoothing)) for p in (quick, point.problem)}
+    gain = 1e-7 * max(1.0, abs(criterion.cost(point)))
     place: FloatArray | None = None
     for j in free.tolist():
-        size, here = point.problem.sizes[j], point.smoothing[j]
-        targets = [0.3, min(2.0, 0.3 * size), min(8.0, 0.5 * size), 0.6 * size]
-        for lam in (np.inf, *ridges_for(point.problem, j, targets)):
+        size, here = quick.sizes[j], point.smoothing[j]
+        smooth = ridges_for(quick, j, [min(1.0, 0.3 * size), min(8.0, 0.5 * size)])
+        rough = ridges_for(point.problem, j, [0.6 * point.problem.sizes[j]])
+        trials = [(quick, lam) for lam in (np.inf, *smooth)] + [(point.problem, rough[0])]
+        for problem, lam in trials:
             both = np.isfinite([lam, here])
             if lam == here or (both.all() and abs(np.log(lam / here)) < NEAR):
                 continue
             trial = point.smoothing.copy()
             trial[j] = lam
-            value = criterion.cost(point.problem.at(trial))
-            if value < best:
-                best, place = value, trial
+            better = costs[id(problem)] - criterion.cost(problem.at(trial))
+            if better > gain:
+                gain, place = better, trial
     return place
 
 
