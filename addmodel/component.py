@@ -387,10 +387,9 @@ def _without_spanned(
                 if mutual and i > j:
                     continue
                 gone.add((j, k))
-                notes.append(
-                    f"The straight part '{name}' of {component.name} is already in "
-                    f"{components[i].name} and is kept once, there."
-                )
+                part = f"The straight part of {component.name}"
+                what = part if component.block_sizes else name
+                notes.append(f"{what} is already in {components[i].name}: it is kept once, there.")
                 break
     kept = tuple(
         replace(c, own=tuple(k for k in c.own if (j, k) not in gone))

@@ -237,6 +237,14 @@ class Laid:
         fixed = [c.smoothing for c in owners]
         degrees = [None if c.df is None else c.df - len(c.own) for c in owners]
         problem = self.problem(self.start)
+        for j, spanned in enumerate(problem.spanned):
+            if spanned and (fixed[j] is not None or degrees[j] is not None):
+                raise ModelError(
+                    f"The bend of {owners[j].name} is wholly in the levels of other terms, so "
+                    "df= and smoothing= have no meaning for it. Leave out one of the terms."
+                )
+            if spanned:
+                fixed[j] = np.inf
         first = choose(problem, criterion, fixed, degrees)
         free = [f is None and d is None for f, d in zip(fixed, degrees, strict=True)]
         # A Gaussian outcome's weights do not change with its mean, so X'WX stays.
@@ -309,6 +317,12 @@ def _cautions(design: Design, smoothness: Smoothness) -> list[str]:
             f"The choice of smoothness did not settle, most of all for {worst}. Treat its curve "
             "and its degrees of freedom as approximate; see if it competes with another component."
         )
+    for j, spanned in enumerate(smoothness.point.problem.spanned):
+        if spanned:
+            found.append(
+                f"The bend of {design.components[design.block_owners[j]].name} is wholly in the "
+                "levels of other terms: it adds nothing to them."
+            )
     for j in smoothness.at_zero:
         name = design.components[design.block_owners[j]].name
         found.append(

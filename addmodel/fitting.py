@@ -88,8 +88,8 @@ def fit(
     Caution
         If the choice of smoothness did not settle.
     """
-    if criterion not in CRITERIA:
-        raise ModelError(f"criterion='{criterion}' is not known. {nearest(criterion, CRITERIA)}")
+    if not isinstance(criterion, str) or criterion not in CRITERIA:
+        raise ModelError(f"criterion={criterion!r} is not known. {nearest(criterion, CRITERIA)}")
     assumed = outcome_named(outcome)
     model = parse(formula)
     table = read(data, model, weights=weights, counts=counts, offset=offset, missing=missing)

@@ -1,7 +1,8 @@
 """Saved fits: one zip file of JSON and plain arrays, with a format version. Loading runs no code.
 
 What is saved is what was estimated. The rows are not: a saved fit predicts, tells its tables and
-draws its effects, and holds no data of the persons or places behind it but summaries.
+draws its effects. It holds no outcome, and of the covariates only what a component needs: levels,
+quantiles, and knots, which are values that occur in the data.
 """
 
 from __future__ import annotations

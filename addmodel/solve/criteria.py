@@ -83,7 +83,9 @@ class Reml(Criterion):
             np.diag(0.5 * (rough / variance + point.lost))
             - 0.5 * both * point.block_sums(point.inverse, point.inverse)
             - pushes.T @ point.inverse @ pushes / variance
-            - 0.5 * np.outer(rough, rough) / (variance**2 * (point.problem.n - point.problem.p))
+            - 0.5
+            * np.outer(rough / variance, rough / variance)
+            / (point.problem.n - point.problem.p)
         )
 
 
@@ -148,9 +150,9 @@ class Gcv(Criterion):
         )
         hessian: FloatArray = (
             dd_deviance / deviance
-            - np.outer(d_deviance, d_deviance) / deviance**2
+            - np.outer(d_deviance / deviance, d_deviance / deviance)
             + 2 * dd_tau / left
-            + 2 * np.outer(d_tau, d_tau) / left**2
+            + 2 * np.outer(d_tau / left, d_tau / left)
         )
         return hessian
 

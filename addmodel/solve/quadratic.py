@@ -23,6 +23,10 @@ from addmodel.spaces.base import FloatArray
 IndexArray = np.ndarray[tuple[int], np.dtype[np.int64]]
 
 
+SPANNED = 1e-10
+"""What is left of a column's square, beside the unpenalised ones, when it counts as spanned."""
+
+
 @dataclass(frozen=True)
 class Problem:
     """A penalised quadratic, reduced to its penalised coefficients.
@@ -71,6 +75,13 @@ class Problem:
             log_weights=log_weights,
             n=n,
         )
+
+    @property
+    def spanned(self) -> list[bool]:
+        """For each block, whether the unpenalised columns leave nothing of it."""
+        whole = np.diag(self.sums.gram)[self.p :]
+        left = np.diag(self.schur) > SPANNED * whole
+        return [not left[s].any() for s in self.slices]
 
     @cached_property
     def slices(self) -> list[slice]:

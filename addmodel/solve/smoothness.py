@@ -15,6 +15,7 @@ from dataclasses import dataclass, replace
 import numpy as np
 import scipy.optimize
 
+from addmodel.errors import ModelError
 from addmodel.solve.criteria import Criterion
 from addmodel.solve.quadratic import IndexArray, Point, Problem
 from addmodel.spaces.base import FloatArray
@@ -56,10 +57,12 @@ class Bounds:
     @classmethod
     def of(cls, problem: Problem) -> Bounds:
         diagonal = np.diag(problem.schur)
-        tiny = np.finfo(float).tiny
-        small = [max(float(diagonal[s].min()), tiny) for s in problem.slices]
-        large = [max(float(diagonal[s].max()), tiny) for s in problem.slices]
-        return cls(np.log(np.array(small) * RANGE), np.log(np.array(large) / RANGE))
+        small = np.array([diagonal[s].min() for s in problem.slices])
+        large = np.array([diagonal[s].max() for s in problem.slices])
+        # Below the rounding of S itself, S + Λ need not be positive definite.
+        rounding = np.maximum(1e-14 * large, np.finfo(float).tiny)
+        lower = np.maximum(RANGE * small, rounding)
+        return cls(np.log(lower), np.log(np.maximum(large, rounding) / RANGE))
 
 
 def choose(
@@ -110,6 +113,11 @@ def ridge_reaching(problem: Problem, smoothing: FloatArray, block: int, target: 
         return problem.sizes[block] - float(point.lost[point.blocks.index(block)]) - target
 
     bounds = Bounds.of(problem)
+    if excess(bounds.lower[block]) < 0:
+        raise ModelError(
+            "df= asks for more effective degrees of freedom than the other terms leave to its "
+            "component. Ask for fewer, or leave out a term that holds the same covariate."
+        )
     return float(
         np.exp(scipy.optimize.brentq(excess, bounds.lower[block], bounds.upper[block], xtol=1e-11))
     )
@@ -173,7 +181,7 @@ def quick_look(
         lam = ridges_for(problem, j, np.geomspace(0.05, 0.8 * size, 24))
         d, v = diagonal[place], problem.pull[place] + diagonal[place] * problem.origin[place]
         left = problem.base - (v**2 / (d + lam[:, None])).sum(axis=1)
-        left = np.maximum(left, 1e-12 * abs(problem.base))
+        left = np.maximum(left, max(1e-12 * problem.base, np.finfo(float).tiny))
         cost = (problem.n - problem.p) * np.log(left) + np.log1p(d / lam[:, None]).sum(axis=1)
         own[j] = lam[cost.argmin()]
         used = np.flatnonzero(d > 1e-3 * own[j])
