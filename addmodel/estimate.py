@@ -22,10 +22,12 @@ from addmodel.rows.dense import DenseRows
 from addmodel.solve.criteria import Criterion
 from addmodel.solve.detail import CEILING, wanted
 from addmodel.solve.quadratic import Problem
-from addmodel.solve.smoothness import Smoothness, choose, newton_from
+from addmodel.solve.smoothness import Smoothness, choose, polish
 from addmodel.spaces.base import FloatArray, Penalised
 
 ROUNDS = 16
+DIGITS = 1e-5
+"""When so little of the starting deviance is left, it is summed again about the solution."""
 Progress = Callable[[str], None]
 
 
@@ -232,7 +234,7 @@ class Laid:
         )
 
     def smoothness(self, criterion: Criterion) -> Smoothness:
-        """Choose smoothness; then go on from sums taken anew about the solution."""
+        """Choose smoothness; from sums taken anew about the solution where digits were lost."""
         owners = [self.design.components[j] for j in self.design.block_owners]
         fixed = [c.smoothing for c in owners]
         degrees = [None if c.df is None else c.df - len(c.own) for c in owners]
@@ -246,10 +248,15 @@ class Laid:
             if spanned:
                 fixed[j] = np.inf
         first = choose(problem, criterion, fixed, degrees)
-        free = [f is None and d is None for f, d in zip(fixed, degrees, strict=True)]
-        # A Gaussian outcome's weights do not change with its mean, so X'WX stays.
-        again = self.problem(first.point.coefficients(), problem.sums.gram)
-        return newton_from(first, again, criterion, free)
+        free = np.flatnonzero(
+            [f is None and d is None for f, d in zip(fixed, degrees, strict=True)]
+        )
+        point = first.point
+        if point.penalised_deviance < DIGITS * problem.sums.deviance:
+            # A Gaussian outcome's weights do not change with its mean, so X'WX stays.
+            again = self.problem(point.coefficients(), problem.sums.gram)
+            point = again.at(point.smoothing)
+        return polish(first, point, criterion, free)
 
 
 def _sizes(

@@ -26,7 +26,8 @@ class DenseRows(Rows):
         eta = self.linear_predictor(coefficients)
         slope, weight = outcome.slope_and_weight(self.y, eta, self.weights)
         if gram is None:
-            rooted = self.columns * np.sqrt(weight)[:, None]
+            plain = bool((weight == 1).all())
+            rooted = self.columns if plain else self.columns * np.sqrt(weight)[:, None]
             gram = rooted.T @ rooted
         return Sums(
             at=coefficients,

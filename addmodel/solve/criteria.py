@@ -17,6 +17,8 @@ class Criterion(ABC):
     """A smoothness criterion; gradient and Hessian are in log λ of the point's active blocks."""
 
     name: str
+    rough_optima = False
+    """Whether optima with little smoothing are common, so that no function may be left out."""
 
     @abstractmethod
     def cost(self, point: Point) -> float:
@@ -99,6 +101,7 @@ class Gcv(Criterion):
     """
 
     name = "gcv"
+    rough_optima = True
 
     def scale(self, point: Point) -> float:
         return point.deviance / (point.problem.n - point.effective_df)

@@ -25,6 +25,8 @@ EXACTLY = 1e-10
 """Largest gradient at the optimum, as a part of the cost."""
 ROUGHLY = 1e-5
 """The same while starts are compared."""
+COMMON = (3.0, 8.0, 20.0)
+"""Effective degrees of freedom of a block at common starts."""
 NEAR = 1.5
 """A place closer than this to the present one, in log λ, need not be looked at."""
 LONGEST_STEP = 4.0
@@ -71,7 +73,7 @@ def choose(
     fixed: Sequence[float | None],
     degrees: Sequence[float | None],
 ) -> Smoothness:
-    """The smoothing parameters that the criterion prefers, near enough for `newton_from`.
+    """The smoothing parameters that the criterion prefers, near enough for `polish`.
 
     Parameters
     ----------
@@ -93,7 +95,7 @@ def choose(
     for _ in range(50):
         # The others at their best for these, then these for the others, until nothing moves.
         found = choose_free(problem, criterion, given)
-        found = newton_from(found, problem, criterion, [bool(f) for f in np.isnan(given)])
+        found = polish(found, found.point, criterion, np.flatnonzero(np.isnan(given)))
         before = given.copy()
         smoothing = found.point.smoothing.copy()
         for j, target in targets.items():
@@ -126,26 +128,25 @@ def ridge_reaching(problem: Problem, smoothing: FloatArray, block: int, target: 
 def choose_free(problem: Problem, criterion: Criterion, given: FloatArray) -> Smoothness:
     """The optimum, nearly (see ROUGHLY); `given` holds NaN where a parameter is to be chosen."""
     free = np.flatnonzero(np.isnan(given))
-    bounds = Bounds.of(problem)
     if len(free) == 0:
-        return _result(problem.at(given), criterion, free, bounds, 0, True)
-    quick, begin = quick_look(problem, free, given)
+        return newton(problem.at(given), criterion, free)
+    quick, begin = quick_look(problem, criterion, free, given)
     best: Smoothness | None = None
     steps = 0
     for start in begin:
         known = None if best is None else best.point.smoothing
-        found = newton(quick, criterion, start, free, Bounds.of(quick), ROUGHLY, known)
+        found = newton(quick.at(start), criterion, free, ROUGHLY, known)
         steps += found.steps
         if best is None or criterion.cost(found.point) < criterion.cost(best.point) - 1e-9:
             best = found
     assert best is not None
-    best = newton(problem, criterion, best.point.smoothing, free, bounds, ROUGHLY)
+    best = newton(problem.at(best.point.smoothing), criterion, free, ROUGHLY)
     steps += best.steps - 1
     for _ in range(2 * len(free) + 2):
         better = look_around(best.point, quick, criterion, free)
         if better is None:
             break
-        found = newton(problem, criterion, better, free, bounds, ROUGHLY)
+        found = newton(problem.at(better), criterion, free, ROUGHLY)
         steps += found.steps
         if criterion.cost(found.point) >= criterion.cost(best.point) - 1e-9:
             break
@@ -153,20 +154,17 @@ def choose_free(problem: Problem, criterion: Criterion, given: FloatArray) -> Sm
     return replace(best, steps=steps)
 
 
-def newton_from(
-    found: Smoothness, problem: Problem, criterion: Criterion, free: Sequence[bool]
-) -> Smoothness:
-    """Newton to the end from a solution nearly found, on sums taken anew about it."""
-    moving = np.flatnonzero(free)
-    again = newton(problem, criterion, found.point.smoothing, moving, Bounds.of(problem))
+def polish(found: Smoothness, point: Point, criterion: Criterion, free: IndexArray) -> Smoothness:
+    """Newton to the end from a solution nearly found, here at `point`."""
+    again = newton(point, criterion, free)
     return replace(again, steps=found.steps + again.steps - 1)
 
 
 def quick_look(
-    problem: Problem, free: IndexArray, given: FloatArray
+    problem: Problem, criterion: Criterion, free: IndexArray, given: FloatArray
 ) -> tuple[Problem, list[FloatArray]]:
-    """A smaller problem to compare starts on, and two starts: each block at the best place of its
-    own, and all with little smoothing.
+    """A smaller problem to compare starts on, and the starts: each block at the best place of its
+    own, all with little smoothing, and, where a criterion has many optima, some in between.
 
     The first takes every block as if it were alone, with its functions uncorrelated: their pulls v
     and curvatures d then give the profiled REML cost over the whole range of λ at once,
@@ -174,21 +172,33 @@ def quick_look(
     that would be shrunk by 99.9 % there; the optimum is then sought with all.
     """
     own, rough = given.copy(), given.copy()
+    common = [given.copy() for _ in COMMON]
     counts = list(problem.sizes)
     diagonal = np.maximum(np.diag(problem.schur), np.finfo(float).tiny)
     for j in free.tolist():
         place, size = problem.slices[j], problem.sizes[j]
-        lam = ridges_for(problem, j, np.geomspace(0.05, 0.8 * size, 24))
         d, v = diagonal[place], problem.pull[place] + diagonal[place] * problem.origin[place]
+        lam = np.geomspace(20 * d.max(), half_shrunk(d, 0.7 * size), 40)
         left = problem.base - (v**2 / (d + lam[:, None])).sum(axis=1)
-        left = np.maximum(left, max(1e-12 * problem.base, np.finfo(float).tiny))
+        # Functions that are correlated with each other can seem to take away more than there is.
+        left = np.maximum(left, max(1e-3 * problem.base, np.finfo(float).tiny))
         cost = (problem.n - problem.p) * np.log(left) + np.log1p(d / lam[:, None]).sum(axis=1)
         own[j] = lam[cost.argmin()]
-        used = np.flatnonzero(d > 1e-3 * own[j])
-        counts[j] = min(size, max(20, int(used.max(initial=0)) + 1))
-        rough[j] = ridges_for(problem, j, [0.6 * counts[j]])[0]
+        if criterion.rough_optima:
+            for start, lam_j in zip(common, ridges_for(problem, j, COMMON), strict=True):
+                start[j] = lam_j
+        else:
+            used = np.flatnonzero(d > 1e-3 * own[j])
+            counts[j] = min(size, max(20, int(used.max(initial=0)) + 1))
+        rough[j] = half_shrunk(d, 0.6 * counts[j])
     smaller = sum(counts) < 0.7 * sum(problem.sizes)
-    return (problem.leading(counts) if smaller else problem), [own, rough]
+    begin = [own, rough, *common] if criterion.rough_optima else [own, rough]
+    return (problem.leading(counts) if smaller else problem), begin
+
+
+def half_shrunk(d: FloatArray, count: float) -> float:
+    """λ at which the `count`-th of functions with these curvatures is shrunk by half."""
+    return float(max(np.sort(d)[::-1][int(count)], np.finfo(float).tiny))
 
 
 def ridges_for(problem: Problem, block: int, targets: Sequence[float] | FloatArray) -> FloatArray:
@@ -199,7 +209,7 @@ def ridges_for(problem: Problem, block: int, targets: Sequence[float] | FloatArr
     d = np.maximum(np.diag(problem.schur)[problem.slices[block]], np.finfo(float).tiny)
     low = np.full(len(targets), np.log(d.min()) - 20)
     high = np.full(len(targets), np.log(d.max()) + 20)
-    for _ in range(25):
+    for _ in range(20):
         middle = (low + high) / 2
         rough = (d / (d + np.exp(middle)[:, None])).sum(axis=1) > targets
         low, high = np.where(rough, middle, low), np.where(rough, high, middle)
@@ -207,21 +217,19 @@ def ridges_for(problem: Problem, block: int, targets: Sequence[float] | FloatArr
 
 
 def newton(
-    problem: Problem,
+    point: Point,
     criterion: Criterion,
-    smoothing: FloatArray,
     free: IndexArray,
-    bounds: Bounds,
     tolerance: float = EXACTLY,
     known: FloatArray | None = None,
 ) -> Smoothness:
-    """Newton's method with a positive-definite safeguard and step-halving, from `smoothing`.
+    """Newton's method with a positive-definite safeguard and step-halving, from `point`.
 
     It ends when the gradient is below `tolerance` of the cost, or early when it has come close to a
     `known` optimum: there it would only arrive again.
     """
-    point = problem.at(smoothing)
-    cost = criterion.cost(point)
+    problem, cost = point.problem, criterion.cost(point)
+    bounds = Bounds.of(problem)
     settled = False
     steps = 0
     for steps in range(1, STEPS + 1):  # noqa: B007 - the count is reported
@@ -248,7 +256,7 @@ def newton(
             trial[names] = np.exp(np.clip(rho + step, bounds.lower[names], bounds.upper[names]))
             candidate = problem.at(trial)
             value = criterion.cost(candidate)
-            if value < cost:
+            if value < cost + 1e-13 * max(1.0, abs(cost)):  # within rounding a step may not show
                 moved = True
                 break
             step /= 2
@@ -310,21 +318,23 @@ def look_around(
 
     Places with much smoothing are compared on the smaller problem, where functions are few.
     """
-    costs = {id(p): criterion.cost(p.at(point.smoothing)) for p in (quick, point.problem)}
-    gain = 1e-7 * max(1.0, abs(criterion.cost(point)))
+    full, now = point.problem, criterion.cost(point)
+    gain = 1e-7 * max(1.0, abs(now))
+    now_quick = criterion.cost(quick.at(point.smoothing))
     place: FloatArray | None = None
     for j in free.tolist():
         size, here = quick.sizes[j], point.smoothing[j]
-        smooth = ridges_for(quick, j, [min(1.0, 0.3 * size), min(8.0, 0.5 * size)])
-        rough = ridges_for(point.problem, j, [0.6 * point.problem.sizes[j]])
-        trials = [(quick, lam) for lam in (np.inf, *smooth)] + [(point.problem, rough[0])]
-        for problem, lam in trials:
+        targets = [2.0, 5.0, 10.0, 20.0, 40.0] if criterion.rough_optima else [1.0, 8.0]
+        smooth = ridges_for(quick, j, [t for t in targets if t < 0.5 * size])
+        rough = half_shrunk(np.diag(full.schur)[full.slices[j]], 0.6 * full.sizes[j])
+        trials = [(quick, now_quick, lam) for lam in (np.inf, *smooth)]
+        for problem, before, lam in (*trials, (full, now, rough)):
             both = np.isfinite([lam, here])
             if lam == here or (both.all() and abs(np.log(lam / here)) < NEAR):
                 continue
             trial = point.smoothing.copy()
             trial[j] = lam
-            better = costs[id(problem)] - criterion.cost(problem.at(trial))
+            better = before - criterion.cost(problem.at(trial))
             if better > gain:
                 gain, place = better, trial
     return place
