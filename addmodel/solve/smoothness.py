@@ -21,7 +21,7 @@ from addmodel.solve.quadratic import IndexArray, Point, Problem
 from addmodel.spaces.base import FloatArray
 
 STEPS = 100
-EXACTLY = 1e-10
+EXACTLY = 1e-9
 """Largest gradient at the optimum, as a part of the cost."""
 ROUGHLY = 1e-5
 """The same while starts are compared."""

@@ -153,25 +153,28 @@ def hermite(knots: FloatArray, t: FloatArray) -> scipy.sparse.csr_array:
 
 
 def demmler_reinsch(
-    values: FloatArray, null: FloatArray, weights: FloatArray
-) -> tuple[FloatArray, FloatArray, FloatArray]:
-    """Demmler–Reinsch form of the functions B with roughness J(Bz) = Σz².
+    at_points: scipy.sparse.csr_array,
+    functions: FloatArray,
+    null: FloatArray,
+    weights: FloatArray,
+) -> tuple[FloatArray, FloatArray]:
+    """Demmler–Reinsch form of functions B with roughness J(Bz) = Σz².
 
     Parameters
     ----------
-    values : (m, q)
-        B at the support points.
-    null : (m, p)
-        Functions without roughness at the support points, the constant first.
+    at_points : (m, 2r)
+        `hermite` at the support points.
+    functions : (2r, q)
+        B, as values and slopes at the knots.
+    null : (2r, p)
+        The functions without roughness, the constant first.
     weights : (m,)
         Weights ω.
 
     Returns
     -------
-    coordinates : (q, K)
-        z-coordinates of the columns z_k = φ_k/√γ_k, orthonormal, smoothest first.
-    offset : (p, K)
-        What is to be taken away, in terms of `null`: z_k = B coordinates − null offset.
+    columns : (2r, K)
+        The columns z_k = φ_k/√γ_k as values and slopes, smoothest first.
     gamma : (K,)
         Roughness of the φ_k, ascending.
 
@@ -181,24 +184,31 @@ def demmler_reinsch(
     γ^{-½}. Worked from this inverse and never from the roughness matrix, whose pencil loses all
     digits on unevenly spread points.
     """
+    m, q = at_points.shape[0], functions.shape[1]
     root = np.sqrt(weights / weights.sum())[:, None]
-    q_null, r_null = np.linalg.qr(root * null)
-    rooted = root * values
-    on_null = q_null.T @ rooted
-    left = rooted - q_null @ on_null
-    left -= q_null @ (q_null.T @ left)  # twice is enough: orthogonal to working precision
-    squares, vectors = scipy.linalg.eigh(left.T @ left, check_finite=False)
-    if len(values) >= len(squares) and squares[0] > 1e-8 * squares[-1]:
-        # Enough digits are left when squared, at a third of the cost.
-        singular, right = np.sqrt(squares[::-1]), vectors.T[::-1]
+    flat, turn = np.linalg.qr(root * (at_points @ null))
+    plain = null @ np.linalg.inv(turn)  # the null space, orthonormal in the weights
+    rooted = at_points.multiply(root).tocsr()
+    mass = rooted.T @ rooted
+    bent = functions
+    for _ in range(2):  # twice is enough: orthogonal to working precision
+        bent = bent - plain @ (plain.T @ (mass @ bent))
+    if m > q:
+        squares, vectors = scipy.linalg.eigh(bent.T @ (mass @ bent), check_finite=False)
+    if m > q and squares[0] > 1e-8 * squares[-1]:
+        # Enough digits are left when squared, and the cost hardly grows with m.
+        gamma, right = 1 / squares[::-1], vectors[:, ::-1]
     else:
-        _, singular, right = scipy.linalg.svd(left, full_matrices=False, check_finite=False)
-    count = min(len(values) - null.shape[1], int(np.sum(singular > 1e-15 * singular[0])))
-    coordinates = right[:count].T
-    offset = scipy.linalg.solve_triangular(r_null, on_null @ coordinates)
+        tall = rooted @ bent
+        bent = bent - plain @ (flat.T @ tall)
+        tall -= flat @ (flat.T @ tall)
+        _, singular, rows = scipy.linalg.svd(tall, full_matrices=False, check_finite=False)
+        count = min(m - null.shape[1], int(np.sum(singular > 1e-15 * singular[0])))
+        gamma, right = singular[:count] ** -2.0, rows[:count].T
+    columns = bent @ right
     # The sign of a singular vector is arbitrary: take the one that ends above zero.
-    sign = np.where((values[-1] @ coordinates - null[-1] @ offset) < 0, -1.0, 1.0)
-    return coordinates * sign, offset * sign, singular[:count] ** -2.0
+    last = len(functions) // 2 - 1
+    return columns * np.where(columns[last] < 0, -1.0, 1.0), np.asarray(gamma, dtype=np.float64)
 
 
 def support(t: FloatArray, weights: FloatArray) -> tuple[FloatArray, FloatArray]:

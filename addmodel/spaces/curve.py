@@ -47,10 +47,10 @@ class Curve(Penalised):
         size = min(size, len(points) - 2)
         # 1.6 knots a function: the roughness of the last one kept is then good to a few per cent.
         knots = choose_knots(points, omega, max(96, int(1.6 * size)))
-        value, slope = bent(knots)
-        at_points = hermite(knots, points) @ np.concatenate([value, slope])
-        line = np.stack([np.ones_like(points), points], axis=1)
-        coordinates, offset, gamma = demmler_reinsch(at_points, line, omega)
+        r = len(knots)
+        line = np.zeros((2 * r, 2))
+        line[:r, 0], line[:r, 1], line[r:, 1] = 1.0, knots, 1.0
+        columns, gamma = demmler_reinsch(hermite(knots, points), bent(knots), line, omega)
         return cls(
             key=key,
             low=low,
@@ -58,8 +58,8 @@ class Curve(Penalised):
             distinct=len(points),
             size_kept=min(size, len(gamma)),
             knots=knots,
-            value=value @ coordinates - offset[0] - np.outer(knots, offset[1]),
-            slope=slope @ coordinates - offset[1],
+            value=columns[:r],
+            slope=columns[r:],
             gamma=gamma,
             cap=cap,
             centre=float(np.average(x, weights=weights)),
@@ -84,8 +84,8 @@ class Curve(Penalised):
         return transformed
 
 
-def bent(knots: FloatArray) -> tuple[FloatArray, FloatArray]:
-    """Values and slopes at the knots of functions B with ∫ (Bz)''² = Σz², shape (r, r − 2).
+def bent(knots: FloatArray) -> FloatArray:
+    """Values, then slopes, at the knots of functions B with ∫ (Bz)''² = Σz², shape (2r, r − 2).
 
     A natural cubic spline has f'' = Σ_j c_j hat_j, hat_j the broken line that is 1 at inner knot j,
     so ∫ f''² = c'Rc with R tridiagonal (Green & Silverman 1994, ch. 2); with R = LL', c = L^{-T}z.
@@ -105,5 +105,4 @@ def bent(knots: FloatArray) -> tuple[FloatArray, FloatArray]:
     banded = np.stack([(before + after) / 3, np.append(after[:-1] / 6, 0.0)])
     factor = scipy.linalg.cholesky_banded(banded, lower=True)
     stacked = np.concatenate([value, slope])
-    solved = scipy.linalg.solve_banded((1, 0), factor, stacked.T).T
-    return solved[: len(knots)], solved[len(knots) :]
+    return np.asarray(scipy.linalg.solve_banded((1, 0), factor, stacked.T).T, dtype=np.float64)

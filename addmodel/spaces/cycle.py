@@ -44,10 +44,9 @@ class Cycle(Penalised):
         size = min(size + size % 2, len(points) - 1)  # waves come in pairs: keep them together
         turn = np.append(points, points[0] + 1.0)
         knots = choose_knots(turn, np.append(omega, omega[0]), max(96, int(1.6 * size)))
-        value, slope = periodic(knots)
-        at_points = hermite(knots, points) @ np.concatenate([value, slope])
-        constant = np.ones((len(points), 1))
-        coordinates, offset, gamma = demmler_reinsch(at_points, constant, omega)
+        r = len(knots)
+        constant = np.repeat([1.0, 0.0], r)[:, None]
+        columns, gamma = demmler_reinsch(hermite(knots, points), periodic(knots), constant, omega)
         return cls(
             key=key,
             low=0.0,
@@ -55,8 +54,8 @@ class Cycle(Penalised):
             distinct=len(points),
             size_kept=min(size, len(gamma)),
             knots=knots,
-            value=value @ coordinates - offset[0],
-            slope=slope @ coordinates,
+            value=columns[:r],
+            slope=columns[r:],
             gamma=gamma,
             cap=cap,
             period=period,
@@ -104,12 +103,12 @@ def phase(x: FloatArray, period: float | str) -> FloatArray:
     return np.where(t >= 1.0, 0.0, t)  # a tiny negative x comes out of the modulus as 1
 
 
-def periodic(knots: FloatArray) -> tuple[FloatArray, FloatArray]:
-    """Values and slopes at the knots of periodic B with ∫ (Bz)''² = Σz², shape (r, r − 1).
+def periodic(knots: FloatArray) -> FloatArray:
+    """Values, then slopes, at the knots of periodic B with ∫ (Bz)''² = Σz², shape (2r, r − 2).
 
     `knots` are τ_0 < … < τ_{r−1} = τ_0 + 1, the last the first come round. f'' = Σ c_j hat_j over
     the r − 1 different knots with ∫ f'' = 0; the slope is f'' integrated, less its mean, and the
-    value is the slope integrated. One column of the result is zero (the constraint's direction).
+    value is the slope integrated.
     """
     h = np.diff(knots)
     r = len(h)
@@ -121,13 +120,15 @@ def periodic(knots: FloatArray) -> tuple[FloatArray, FloatArray]:
     factor = np.linalg.cholesky(gram)
     second = scipy.linalg.solve_triangular(factor, np.eye(r), lower=True).T
     direction = ((before + h) / 2) @ second
-    direction /= np.linalg.norm(direction)
-    second -= np.outer(second @ direction, direction)
+    # A reflection takes the constraint's direction to the first axis; the others satisfy it.
+    direction[0] += np.copysign(np.linalg.norm(direction), direction[0])
+    along = second @ direction * (2 / (direction @ direction))
+    second = second[:, 1:] - np.outer(along, direction[1:])
     second = np.concatenate([second, second[:1]])
     step = h[:, None]
-    zero = np.zeros((1, r))
+    zero = np.zeros((1, r - 1))
     slope = np.concatenate([zero, np.cumsum(step * (second[:-1] + second[1:]) / 2, axis=0)])
     rise = step * slope[:-1] + step**2 * (2 * second[:-1] + second[1:]) / 6
     slope -= rise.sum(axis=0)
     rise -= step * rise.sum(axis=0)
-    return np.concatenate([zero, np.cumsum(rise, axis=0)]), slope
+    return np.concatenate([zero, np.cumsum(rise, axis=0), slope])
