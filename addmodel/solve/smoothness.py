@@ -316,19 +316,21 @@ def look_around(
 ) -> FloatArray | None:
     """Each smoothing parameter alone over its whole range: a better place, or None.
 
-    Places with much smoothing are compared on the smaller problem, where functions are few.
+    Compared on the smaller problem, but for little smoothing with all functions of the block.
     """
-    full, now = point.problem, criterion.cost(point)
-    gain = 1e-7 * max(1.0, abs(now))
-    now_quick = criterion.cost(quick.at(point.smoothing))
+    full = point.problem
+    gain = 1e-7 * max(1.0, abs(criterion.cost(point)))
+    now = criterion.cost(quick.at(point.smoothing))
     place: FloatArray | None = None
     for j in free.tolist():
         size, here = quick.sizes[j], point.smoothing[j]
         targets = [2.0, 5.0, 10.0, 20.0, 40.0] if criterion.rough_optima else [1.0, 8.0]
         smooth = ridges_for(quick, j, [t for t in targets if t < 0.5 * size])
+        trials = [(quick, now, lam) for lam in (np.inf, *smooth)]
         rough = half_shrunk(np.diag(full.schur)[full.slices[j]], 0.6 * full.sizes[j])
-        trials = [(quick, now_quick, lam) for lam in (np.inf, *smooth)]
-        for problem, before, lam in (*trials, (full, now, rough)):
+        wide = full.leading([full.sizes[i] if i == j else k for i, k in enumerate(quick.sizes)])
+        trials.append((wide, criterion.cost(wide.at(point.smoothing)), rough))
+        for problem, before, lam in trials:
             both = np.isfinite([lam, here])
             if lam == here or (both.all() and abs(np.log(lam / here)) < NEAR):
                 continue

@@ -194,7 +194,7 @@ def demmler_reinsch(
     for _ in range(2):  # twice is enough: orthogonal to working precision
         bent = bent - plain @ (plain.T @ (mass @ bent))
     if m > q:
-        squares, vectors = scipy.linalg.eigh(bent.T @ (mass @ bent), check_finite=False)
+        squares, vectors = np.linalg.eigh(bent.T @ (mass @ bent))
     if m > q and squares[0] > 1e-8 * squares[-1]:
         # Enough digits are left when squared, and the cost hardly grows with m.
         gamma, right = 1 / squares[::-1], vectors[:, ::-1]
