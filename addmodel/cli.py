@@ -47,7 +47,15 @@ def fit(
     weights: Column = None,
     counts: Column = None,
     offset: Column = None,
-    criterion: Annotated[Literal["reml", "gcv"], typer.Option(help="Chooses smoothness.")] = "reml",
+    exposure: Column = None,
+    trials: Column = None,
+    event: Annotated[str | None, typer.Option(help="The yes/no level that is counted.")] = None,
+    scale: Annotated[
+        Literal["known", "estimated"] | None, typer.Option(help="For counts and yes/no.")
+    ] = None,
+    criterion: Annotated[
+        Literal["reml", "gcv", "ubre"], typer.Option(help="Chooses smoothness.")
+    ] = "reml",
     missing: Annotated[
         Literal["drop", "error"], typer.Option(help="Rows that lack a value.")
     ] = "drop",
@@ -64,6 +72,10 @@ def fit(
                 weights=weights,
                 counts=counts,
                 offset=offset,
+                exposure=exposure,
+                trials=trials,
+                event=event,
+                scale=scale,
                 criterion=criterion,
                 missing=missing,
                 progress=progress,
@@ -87,6 +99,7 @@ def predict(
     new_observation: Annotated[
         bool, typer.Option("--new-observation", help="Interval for a new observation.")
     ] = False,
+    per: Annotated[float | None, typer.Option(help="Per so much exposure.")] = None,
     scale: Annotated[Literal["outcome", "link"], typer.Option(help="Scale of the result.")] = (
         "outcome"
     ),
@@ -99,18 +112,32 @@ def predict(
 ) -> None:
     """Predict new rows from a saved fit: prediction, std_error, lower, upper, outside."""
     with _told():
-        import addmodel
+        import pandas as pd
 
+        import addmodel
+        from addmodel.inference import check_level
+
+        check_level(interval)
+        _check_table_name(out)
         table = addmodel.load(model).predict(
             data,
             scale=scale,
             interval=interval,
             new_observation=new_observation,
+            per=per,
             unseen=unseen,
             missing=missing,
         )
-        _write_table(table, out, index=False)  # type: ignore[arg-type]
-        typer.echo(f"{len(table):,} predictions written to {out}")
+        assert isinstance(table, pd.DataFrame)
+        _write_table(table, out, index=False)
+        kind = "a new observation" if new_observation else "the mean"
+        beyond = int(table["outside"].sum())
+        typer.echo(
+            f"{len(table):,} predictions written to {out}, with {100 * interval:g} % intervals for "
+            f"{kind}" + ("." if new_observation else " (--new-observation: for a single value).")
+        )
+        if beyond:
+            typer.echo(f"{beyond:,} of them lie outside the data of the fit: column 'outside'.")
 
 
 @app.command()
@@ -136,7 +163,7 @@ def demo(
         typer.echo(str(found.summary()))
         typer.echo(
             f"\nWritten to {out}: {', '.join(written)}\n"
-            "Look at effects.png first: one panel a component, all on one scale.\n"
+            "Look at effects.png first: one panel a component, with the same range of effects.\n"
             "An association is not a cause, a curve says nothing outside its data, and decisions "
             "belong to qualified people and local rules."
         )
@@ -194,6 +221,9 @@ def _write(found: Fit, out: Path) -> list[str]:
     from addmodel.files import replacing
 
     out.mkdir(parents=True, exist_ok=True)
+    if (out / "fit.addmodel").exists():
+        for old in out.glob("effect-*"):  # of the fit before: its components may be others
+            old.unlink()
     summary = out / "summary.txt"
     with replacing(summary) as temporary:
         temporary.write_text(f"{found.summary()}\n", encoding="utf-8")
@@ -224,12 +254,17 @@ def _file_names(names: list[str]) -> list[str]:
     return found
 
 
-def _write_table(table: pd.DataFrame, path: Path, index: bool = True) -> None:
+def _check_table_name(path: Path) -> None:
     from addmodel.errors import DataError
-    from addmodel.files import replacing
 
     if path.suffix not in (".csv", ".parquet"):
         raise DataError(f"Tables are written as .csv or .parquet; got '{path.name}'.")
+
+
+def _write_table(table: pd.DataFrame, path: Path, index: bool = True) -> None:
+    from addmodel.files import replacing
+
+    _check_table_name(path)
     with replacing(path) as temporary:
         if path.suffix == ".csv":
             table.to_csv(temporary, index=index)

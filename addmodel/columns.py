@@ -178,7 +178,7 @@ def _column(name: str, values: Series, as_levels: bool) -> Column:
     if not as_levels and (kind == "number" or kind == "date"):
         column = Column(name, kind, frozen(_measured(values)))
     else:
-        codes, labels = _levels(values)
+        codes, labels = level_codes(values)
         twice = sorted({label for label in labels if labels.count(label) > 1})
         if twice:
             raise DataError(f"{name}: several categories have the label '{twice[0]}'.")
@@ -210,7 +210,7 @@ def new_column(
         values = raw.values(expression, rows)
         kind = plain_kind(values)
         if fitted.kind == "levels":
-            codes, labels = _levels(values)
+            codes, labels = level_codes(values)
             place = {label: i for i, label in enumerate(fitted.levels)}
             full[rows] = np.array([place.get(label, UNSEEN_LEVEL) for label in labels])[codes]
             new = [(i, label) for i, label in enumerate(labels) if label not in place]
@@ -237,7 +237,7 @@ def _measured(values: Series) -> FloatArray:
     return np.asarray(days + rest / day, dtype=np.float64)
 
 
-def _levels(values: Series) -> tuple[IntArray, tuple[str, ...]]:
+def level_codes(values: Series) -> tuple[IntArray, tuple[str, ...]]:
     """Codes (n,) and the labels of the levels that occur, in order."""
     kind = plain_kind(values)
     if kind == "category":

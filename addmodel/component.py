@@ -175,6 +175,11 @@ class Design:
         return 1 + len(self.centres)
 
     @property
+    def count(self) -> int:
+        """Number of components."""
+        return len(self.components)
+
+    @property
     def block_sizes(self) -> tuple[int, ...]:
         """Number of columns of each penalised block, component by component."""
         return tuple(size for c in self.components for size in c.block_sizes)

@@ -9,6 +9,7 @@ from __future__ import annotations
 from collections.abc import Iterator, Mapping
 from dataclasses import dataclass
 from operator import itemgetter
+from types import MappingProxyType
 from typing import NoReturn
 
 import numpy as np
@@ -32,6 +33,7 @@ from addmodel.errors import DataError, FormulaError, nearest
 from addmodel.expression import Expression, parse_expression
 from addmodel.formula import Model
 from addmodel.frames import BoolArray, Index, Source, as_series, open_source
+from addmodel.responses import Response, yes_no
 
 
 @dataclass(frozen=True, eq=False)
@@ -55,6 +57,10 @@ class Table:
         else such a row holds or lacks): n_read = n + n_missing + n_weightless.
     cautions : tuple of str
         What the reader should know about the data.
+    trials : ndarray of float64
+        Trials of each row, for a yes/no outcome (`outcome` is then events/trials); else ones.
+    event : str or None
+        The level that is counted, for a yes/no outcome of single trials.
     """
 
     outcome_name: str
@@ -69,6 +75,8 @@ class Table:
     n_missing: int
     n_weightless: int
     cautions: tuple[str, ...]
+    trials: FloatArray
+    event: str | None
 
 
 @dataclass(frozen=True, eq=False)
@@ -87,7 +95,9 @@ class NewRows:
     unseen : mapping of str to tuple of Unseen
         By column key, for the columns that have any.
     missing : ndarray of bool, shape (n,)
-        Rows in which some covariate is missing.
+        Rows in which something needed is missing.
+    offset : ndarray of float64, shape (n,)
+        The offset and the logarithm of the exposure; NaN where missing.
     """
 
     columns: Mapping[str, Column]
@@ -95,6 +105,7 @@ class NewRows:
     n: int
     unseen: Mapping[str, tuple[Unseen, ...]]
     missing: BoolArray
+    offset: FloatArray
 
 
 def read(
@@ -104,6 +115,10 @@ def read(
     weights: object = None,
     counts: object = None,
     offset: object = None,
+    exposure: object = None,
+    trials: object = None,
+    event: object = None,
+    binary: bool = False,
     missing: str = "drop",
 ) -> Table:
     """Read the columns that a model needs, check them, and keep the complete rows.
@@ -115,9 +130,14 @@ def read(
         path of a .csv, .tsv (either also .gz) or .parquet file. It is never changed.
     model : Model
         The parsed formula.
-    weights, counts, offset : str or array of shape (n_read,), optional
+    weights, counts, offset, exposure, trials : str or array of shape (n_read,), optional
         A column, an expression in columns, or values by position. Weights are finite and at least
-        zero; counts are also whole.
+        zero; counts are also whole; an exposure is positive (its logarithm is added to the
+        offset); trials are whole, and a row of 0 trials is left out.
+    event : optional
+        The level of a yes/no outcome that is counted.
+    binary : bool
+        Whether the outcome is yes/no.
     missing : {"drop", "error"}
         What to do with rows in which a used value is missing.
 
@@ -136,7 +156,16 @@ def read(
     _check_choice("missing", missing, ("drop", "error"))
     source = open_source(data)
     _check_formula(model, source)
-    given = {"weights": weights, "counts": counts, "offset": offset}
+    if not binary and (trials is not None or event is not None):
+        what = "trials=" if trials is not None else "event="
+        raise DataError(f"{what} belongs to a yes/no outcome: outcome='binomial'.")
+    given = {
+        "weights": weights,
+        "counts": counts,
+        "offset": offset,
+        "exposure": exposure,
+        "trials": trials,
+    }
     given = {role: values for role, values in given.items() if values is not None}
     roles = {role: _role(role, values, source) for role, values in given.items()}
     raw = _load(model, source, given, roles)
@@ -144,7 +173,8 @@ def read(
 
     weight = _weights(roles.get("weights"), raw, whole=False)
     count = _weights(roles.get("counts"), raw, whole=True)
-    weightless = (weight == 0.0) | (count == 0.0)
+    number = _weights(roles.get("trials"), raw, whole=True)
+    weightless = (weight == 0.0) | (count == 0.0) | (number == 0.0)
     incomplete = raw.incomplete(raw.columns) & ~weightless
     if missing == "error" and incomplete.any():
         _refuse_missing(raw, incomplete, "Write missing='drop' to leave them out.")
@@ -152,12 +182,17 @@ def read(
     if rows.size == 0:
         _refuse_empty(raw, weightless, incomplete)
 
-    outcome = raw.numbers(model.outcome, rows, "is {}; it must be a number for a Gaussian outcome.")
+    if binary:
+        response = yes_no(model.outcome, roles.get("trials"), event, raw, rows)
+    else:
+        rule = "is {}; it must be a number for this outcome (yes/no: outcome='binomial')."
+        plain = raw.numbers(model.outcome, rows, rule)
+        response = Response(plain, np.ones(rows.size), None)
     columns = fitted_columns(model, raw, rows)
-    offsets = raw.numbers(roles["offset"], rows) if "offset" in roles else np.zeros(rows.size)
+    offsets = _offsets(roles, raw, rows)
     return Table(
         outcome_name=model.outcome.text,
-        outcome=frozen(outcome),
+        outcome=frozen(response.proportion),
         weights=frozen(weight[rows]),
         counts=frozen(count[rows]),
         offset=frozen(offsets),
@@ -167,7 +202,13 @@ def read(
         n_read=n,
         n_missing=int(incomplete.sum()),
         n_weightless=int(weightless.sum()),
-        cautions=(*_order_cautions(given, raw.index), *column_cautions(model, columns)),
+        cautions=(
+            *_order_cautions(given, raw.index),
+            *response.cautions,
+            *column_cautions(model, columns),
+        ),
+        trials=frozen(response.trials),
+        event=response.event,
     )
 
 
@@ -176,6 +217,7 @@ def read_new(
     columns: Mapping[str, Column],
     expressions: Mapping[str, Expression],
     *,
+    roles: Mapping[str, str] = MappingProxyType({}),
     missing: str = "keep",
 ) -> NewRows:
     """Read the covariates of new rows and code them as at the fit.
@@ -188,6 +230,8 @@ def read_new(
         The fitted columns.
     expressions : mapping of str to Expression
         What each of them is computed from, by the same keys.
+    roles : mapping of str to str
+        What the offset and the exposure are computed from, where the new rows have to hold them.
     missing : {"keep", "error"}
         Whether missing values are kept as missing or refused.
 
@@ -203,10 +247,13 @@ def read_new(
     """
     _check_choice("missing", missing, ("keep", "error"))
     source = open_source(data)
-    needed = list(dict.fromkeys(name for key in columns for name in expressions[key].names))
+    parts = {role: _role_of_fit(role, text, source) for role, text in roles.items()}
+    used = [expressions[key].names for key in columns] + [part.names for part in parts.values()]
+    needed = list(dict.fromkeys(name for names in used for name in names))
     for name in needed:
         if name not in source.names:
-            raise DataError(f"{_absent(name, source)} The model needs: {', '.join(needed)}.")
+            also = "".join(f" ({role}=)" for role, part in parts.items() if name in part.names)
+            raise DataError(f"{_absent(name, source)} The model needs: {', '.join(needed)}{also}.")
     raw = Raw.of(*source.load(needed))
     gaps = raw.incomplete(needed)
     if missing == "error" and gaps.any():
@@ -217,7 +264,10 @@ def read_new(
         coded[key], found = new_column(fitted, expressions[key], raw)
         if found:
             unseen[key] = found
-    return NewRows(coded, raw.index, len(raw.index), unseen, frozen(gaps))
+    offset = np.full(len(raw.index), np.nan)
+    whole = np.flatnonzero(~gaps)
+    offset[whole] = _offsets(parts, raw, whole)
+    return NewRows(coded, raw.index, len(raw.index), unseen, frozen(gaps), frozen(offset))
 
 
 # Weights, counts and offset
@@ -238,6 +288,31 @@ def _role(role: str, given: object, source: Source) -> Role:
                 f"{nearest(name, map(str, source.names))}"
             )
     return Role(text, expression.names, expression.evaluate)
+
+
+def _role_of_fit(role: str, text: str, source: Source) -> Role:
+    """What a role was computed from at the fit, to be found in new rows."""
+    if text in source.names:
+        return Role(f"{role}= ({text})", (text,), itemgetter(text))
+    expression = parse_expression(text, role)
+    return Role(f"{role}= ({text})", expression.names, expression.evaluate)
+
+
+def _offsets(roles: Mapping[str, Role], raw: Raw, rows: IntArray) -> FloatArray:
+    """The offset and the logarithm of the exposure at complete rows, (n,)."""
+    total = np.zeros(rows.size)
+    if "offset" in roles:
+        total = total + raw.numbers(roles["offset"], rows)
+    if "exposure" in roles:
+        exposure = raw.numbers(roles["exposure"], rows)
+        if (exposure <= 0).any():
+            broken = rows[exposure <= 0]
+            raise DataError(
+                f"{roles['exposure'].text} must be positive: {exposure[exposure <= 0][0]:g} in "
+                f"{listed(broken)}."
+            )
+        total = total + np.log(exposure)
+    return total
 
 
 def _load(

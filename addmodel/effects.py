@@ -27,7 +27,7 @@ if TYPE_CHECKING:
 GRID = 201
 
 
-@dataclass(frozen=True)
+@dataclass(frozen=True, repr=False)
 class Effect:
     """A component's partial effect.
 
@@ -46,6 +46,9 @@ class Effect:
     component: str
     table: pd.DataFrame
     panel: figures.Panel
+
+    def __repr__(self) -> str:
+        return f"Effect of {self.component}, {len(self.table)} rows\n{self.table.head()}"
 
     def plot(self, ax: Axes | None = None) -> Axes:
         """Draw the effect, on `ax` if it is given; returns the axes."""
@@ -82,7 +85,7 @@ def effect(estimate: Estimate, name: str, *, at: object, level: float) -> Effect
     panel = figures.Panel(
         kind=_kind(space),
         covariate=_axis_label(space),
-        quantity=f"Effect on {estimate.model.outcome.text}",
+        quantity=_quantity(estimate),
         x=along[order],
         effect=value[order],
         lower=(value - half)[order],
@@ -132,6 +135,12 @@ def _calendar(first: float, period: str) -> FloatArray:
         stop = start + length
     low, high = float(start.astype(np.int64)), float(stop.astype(np.int64))
     return np.linspace(low, high, GRID)
+
+
+def _quantity(estimate: Estimate) -> str:
+    link = type(estimate.outcome.family.link).__name__
+    scales = {"Identity": "", "Log": ", log scale", "Logit": ", log odds"}
+    return f"Effect on {estimate.model.outcome.text}{scales.get(link, ', link scale')}"
 
 
 def _axis_label(space: object) -> str:

@@ -332,7 +332,8 @@ def _key(panels: Sequence[Panel]) -> str:
     level = " or ".join(f"{100 * each:g} %" for each in sorted({p.level for p in panels}))
     pale = ", paler outside the central 98 % of the data" if any(map(_core, panels)) else ""
     parts = [
-        any(p.kind != "levels" for p in panels) * f"Band: {level} at each point{pale}.",
+        any(p.kind != "levels" for p in panels)
+        * f"Band: {level} at each point{pale}; it may run past the edge. Zero: the data's average.",
         any(len(p.quantiles) for p in panels) * "Strip: the darker, the more data.",
         any(p.kind == "levels" for p in panels) * f"Bars of levels: {level} interval.",
         any(len(p.shares) for p in panels) * "Margin: share of the data.",

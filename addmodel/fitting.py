@@ -23,7 +23,7 @@ from addmodel.inference import (
     components_table,
     posterior_draws,
 )
-from addmodel.outcomes import outcome_named
+from addmodel.outcomes import outcome_for
 from addmodel.prediction import model_columns, predict
 from addmodel.solve.criteria import CRITERIA
 from addmodel.spaces.base import FloatArray
@@ -37,10 +37,14 @@ def fit(
     formula: str,
     data: object,
     *,
-    outcome: str = "gaussian",
+    outcome: object = "gaussian",
     weights: object = None,
     counts: object = None,
     offset: object = None,
+    exposure: object = None,
+    trials: object = None,
+    event: object = None,
+    scale: Literal["known", "estimated"] | None = None,
     criterion: str = "reml",
     missing: Literal["drop", "error"] = "drop",
     progress: Progress | None = None,
@@ -58,16 +62,29 @@ def fit(
     data : table, mapping or path
         A pandas, polars or arrow table, a mapping of names to arrays of equal length, or the path
         of a CSV or Parquet file.
-    outcome : str
-        What is assumed of the outcome: "gaussian".
+    outcome : str or statsmodels family
+        What is assumed of the outcome: "gaussian", "binomial", "poisson", "negative binomial" (its
+        dispersion is estimated), "gamma", "inverse gaussian" or "tweedie" (these three with log
+        link), or an instance of a statsmodels family with its link.
     weights : str or array (n,), optional
         Precision weights: a row's variance is σ²/weight. A column, an expression, or values.
     counts : str or array (n,), optional
         A row stands for that many equal rows.
     offset : str or array (n,), optional
-        A known part of the mean.
-    criterion : {"reml", "gcv"}
-        How smoothness is chosen: restricted maximum likelihood, or generalised cross-validation.
+        A known part of the linear predictor.
+    exposure : str or array (n,), optional
+        What a count is counted over (persons, hours): its logarithm is added to the offset.
+    trials : str or array (n,), optional
+        Trials of each binomial row; the outcome is then events (whole numbers) or proportions.
+    event : optional
+        The level of a yes/no outcome that is counted; by default the last, True, or 1.
+    scale : {"known", "estimated"}, optional
+        For counts and yes/no: whether the variance is what the distribution says (the default), or
+        that times an estimated scale (quasi-likelihood, Wedderburn 1974).
+    criterion : {"reml", "gcv", "ubre"}
+        How smoothness is chosen: restricted maximum likelihood (outside the Gaussian case
+        Laplace's approximation to it), generalised cross-validation, or, for a known scale, the
+        unbiased risk estimate.
     missing : {"drop", "error"}
         What to do with rows that lack a used value. Dropped rows are counted in the summary.
     progress : callable, optional
@@ -90,14 +107,28 @@ def fit(
     """
     if not isinstance(criterion, str) or criterion not in CRITERIA:
         raise ModelError(f"criterion={criterion!r} is not known. {nearest(criterion, CRITERIA)}")
-    assumed = outcome_named(outcome)
+    assumed = outcome_for(outcome, scale)
+    if criterion == "ubre" and not assumed.scale_known:
+        raise ModelError(
+            f"criterion='ubre' needs a known scale, and that of a {assumed.name} outcome is "
+            "estimated. Write criterion='gcv' or 'reml'."
+        )
     model = parse(formula)
-    table = read(data, model, weights=weights, counts=counts, offset=offset, missing=missing)
-    given = {"weights": weights, "counts": counts, "offset": offset}
+    rows = {
+        "weights": weights,
+        "counts": counts,
+        "offset": offset,
+        "exposure": exposure,
+        "trials": trials,
+    }
+    table = read(
+        data, model, **rows, event=event, binary=assumed.kind == "Binomial", missing=missing
+    )
+    given = {"outcome": outcome, **rows, "event": event, "scale": scale}
     arguments = {
-        name: f'"{value}"' if isinstance(value, str) else name
+        name: str(value) if isinstance(value, str) else f"<{name}>"
         for name, value in given.items()
-        if value is not None
+        if value is not None and not (name == "outcome" and value == "gaussian")
     }
     found = estimate(
         model, table, assumed, CRITERIA[criterion], arguments, progress or (lambda text: None)
@@ -163,24 +194,31 @@ class Fit:
             raise ModelError(_ROWLESS)
         return self.estimate.table.rows
 
-    def residuals(self, kind: Literal["response", "scaled"] = "scaled") -> FloatArray:
+    def residuals(self, kind: Literal["response", "scaled", "deviance"] = "scaled") -> FloatArray:
         """Residuals of the rows used, shape (n,).
 
         Parameters
         ----------
-        kind : {"scaled", "response"}
-            "response": outcome − fitted. "scaled": that times √weight/σ, so that its variance
-            is about 1.
+        kind : {"scaled", "response", "deviance"}
+            "response": outcome − fitted. "scaled" (Pearson's): that over its standard deviation,
+            so that its variance is about 1. "deviance": the signed root of the row's deviance,
+            over √φ.
         """
         table = self.estimate.table
         if table is None:
             raise ModelError(_ROWLESS)
-        if kind not in ("response", "scaled"):
-            raise ModelError(f"kind={kind!r} is not known. {nearest(kind, ('response', 'scaled'))}")
-        plain = table.outcome - self.fitted
+        kinds = ("scaled", "response", "deviance")
+        if kind not in kinds:
+            raise ModelError(f"kind={kind!r} is not known. {nearest(str(kind), kinds)}")
+        mean, outcome = self.fitted, self.estimate.outcome
+        plain = table.outcome - mean
         if kind == "response":
             return plain
-        return plain * np.sqrt(table.weights / self.estimate.scale)
+        weight = np.sqrt(table.weights * table.trials / self.estimate.scale)
+        if kind == "deviance":
+            own = np.sqrt(np.maximum(outcome.deviances(table.outcome, mean), 0.0))
+            return np.asarray(np.sign(plain) * own * weight, dtype=np.float64)
+        return plain * weight / np.sqrt(outcome.variance(mean))
 
     @property
     def effective_df(self) -> float:
@@ -189,12 +227,35 @@ class Fit:
 
     @property
     def scale(self) -> float:
-        """The variance σ² of a row of weight one."""
+        """The scale φ: for a Gaussian outcome the variance of a row of weight one."""
         return self.estimate.scale
 
     @property
+    def dispersion(self) -> float:
+        """Pearson's X²/(n − τ): far above 1 the outcome varies more than it is assumed to."""
+        return self.estimate.dispersion
+
+    @property
+    def aic(self) -> float:
+        """−2 log-likelihood + 2 (effective degrees of freedom, and 1 for an estimated scale)."""
+        return self._aic(self.effective_df)
+
+    @property
+    def aic_corrected(self) -> float:
+        """AIC that also counts the smoothing parameters' uncertainty (Wood, Pya & Säfken 2016,
+
+        J. Am. Stat. Assoc. 111; its first-order part).
+        """
+        return self._aic(self.estimate.corrected_df)
+
+    def _aic(self, df: float) -> float:
+        outcome = self.estimate.outcome
+        extra = float(not outcome.scale_known) + float(outcome.dispersion_free)
+        return 2 * (df + extra) - 2 * self.estimate.log_likelihood
+
+    @property
     def deviance(self) -> float:
-        """Residual sum of squares, weighted."""
+        """The deviance; for a Gaussian outcome the weighted residual sum of squares."""
         return self.estimate.deviance
 
     @property
@@ -204,12 +265,12 @@ class Fit:
 
     @property
     def log_likelihood(self) -> float:
-        """Log-likelihood at the estimated mean, with the variance deviance/n."""
+        """Log-likelihood at the estimated mean (Gaussian: with the variance deviance/n)."""
         return self.estimate.log_likelihood
 
     @property
     def criterion_value(self) -> float:
-        """REML: log restricted likelihood. GCV: the score n·D/(n − τ)²."""
+        """REML: log restricted likelihood, constants included. GCV, UBRE: the score."""
         return self.estimate.criterion_value
 
     @property
@@ -227,6 +288,7 @@ class Fit:
         new_observation: bool = False,
         only: str | Sequence[str] | None = None,
         without: str | Sequence[str] | None = None,
+        per: float | None = None,
         unseen: Literal["error", "base", "average"] = "error",
         missing: Literal["keep", "error"] = "keep",
     ) -> FloatArray | pd.DataFrame:
@@ -241,12 +303,16 @@ class Fit:
         interval : float, optional
             Level of an interval, such as 0.95.
         new_observation : bool
-            The interval is for a new observation (of weight one), not for the mean.
+            The interval is for a new observation (of weight one, of one trial), not for the mean;
+            std_error is then its standard deviation.
         only, without : str or sequence of str, optional
             Only these components (without the intercept), or all but these.
         unseen : {"error", "base", "average"}
             What a level stands for that the fit has not seen: an error, the base level, or the
-            average over the data.
+            average over the data (its interval is then as wide as levels differ).
+        per : float, optional
+            For a fit with exposure: predict per so much of it; otherwise the new rows must have
+            the column.
         missing : {"keep", "error"}
             A row that lacks a covariate gets a missing prediction and a caution, or is an error.
 
@@ -254,8 +320,9 @@ class Fit:
         -------
         ndarray (n,) or DataFrame
             Without `interval` an array; with it a frame with prediction, std_error, lower, upper
-            and outside (the row lies outside the data fitted). Row i answers row i. An offset is
-            not added.
+            and outside (the row lies outside the data fitted). Row i answers row i. An offset and
+            the exposure given as columns are looked up in the new rows; a binomial prediction is
+            a probability.
         """
         return predict(
             self.estimate,
@@ -265,6 +332,7 @@ class Fit:
             new_observation=new_observation,
             only=only,
             without=without,
+            per=per,
             unseen=unseen,
             missing=missing,
         )

@@ -24,9 +24,11 @@ DEFAULT_SEED = 20_260_101
 def quantile(estimate: Estimate, level: float) -> float:
     """Half-width of an interval in standard errors.
 
-    Student's t on n − τ degrees of freedom, since the variance is estimated.
+    The normal's; where the scale is estimated, Student's t on n − τ degrees of freedom.
     """
     check_level(level)
+    if estimate.outcome.scale_known:
+        return float(scipy.stats.norm.ppf(0.5 + level / 2))
     left = max(estimate.n - float(estimate.column_df.sum()), 1.0)
     return float(scipy.stats.t.ppf(0.5 + level / 2, left))
 
@@ -61,7 +63,10 @@ def linear(
 
 
 def coefficients_table(estimate: Estimate, level: float = 0.95) -> pd.DataFrame:
-    """Unpenalised coefficients as reported: estimate, std_error, lower, upper, p."""
+    """Unpenalised coefficients as reported: estimate, std_error, lower, upper, p.
+
+    The straight part of a curve has no p: a test of it alone would say nothing of the curve.
+    """
     design = estimate.design
     p = design.p
     change = design.reporting()[:p, :p]
@@ -70,8 +75,12 @@ def coefficients_table(estimate: Estimate, level: float = 0.95) -> pd.DataFrame:
     error = np.sqrt(np.diag(covariance))
     half = quantile(estimate, level) * error
     left = max(estimate.n - float(estimate.column_df.sum()), 1.0)
+    null = scipy.stats.norm() if estimate.outcome.scale_known else scipy.stats.t(left)
     with np.errstate(divide="ignore", invalid="ignore"):
-        p_value = 2 * scipy.stats.t.sf(np.abs(value / error), left)
+        p_value = 2 * null.sf(np.abs(value / error))
+    for component, place in zip(design.components, design.unpenalised_places, strict=True):
+        if component.block_sizes:
+            p_value[place] = np.nan
     return pd.DataFrame(
         {
             "estimate": value,
@@ -91,14 +100,8 @@ def components_table(estimate: Estimate) -> pd.DataFrame:
     (Pratt 1987; Gu 1992, J. Am. Stat. Assoc. 87): the shares sum to 1, and one can be negative.
     """
     design = estimate.design
-    beta = estimate.coefficients.copy()
-    beta[0] = 0.0
-    # The columns are centred in the data's weights, so sums of products are covariances.
-    pulled = estimate.gram @ beta
-    total = float(beta @ pulled)
     rows = []
     for j in range(len(design.components)):
-        places = design.places(j)
         own = [
             float(lam)
             for lam, owner in zip(estimate.smoothing, design.block_owners, strict=True)
@@ -107,7 +110,7 @@ def components_table(estimate: Estimate) -> pd.DataFrame:
         rows.append(
             {
                 "effective_df": estimate.component_df(j),
-                "share": float(beta[places] @ pulled[places]) / total if total > 0 else np.nan,
+                "share": float(estimate.shares[j]),
                 "smoothing": own[0] if own else np.nan,
             }
         )

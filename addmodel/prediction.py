@@ -3,8 +3,9 @@
 from __future__ import annotations
 
 import warnings
-from collections.abc import Iterable, Sequence
+from collections.abc import Iterable, Mapping, Sequence
 from dataclasses import replace
+from types import MappingProxyType
 from typing import Literal
 
 import numpy as np
@@ -16,9 +17,11 @@ from addmodel.errors import Caution, DataError, ModelError, nearest
 from addmodel.estimate import Estimate
 from addmodel.expression import Expression
 from addmodel.formula import find
-from addmodel.inference import linear, quantile
+from addmodel.inference import DEFAULT_SEED, check_level, linear, quantile
 from addmodel.spaces.base import FloatArray
 from addmodel.spaces.levels import Levels
+
+DRAWS = 4000
 
 
 def predict(
@@ -30,6 +33,7 @@ def predict(
     new_observation: bool,
     only: str | Sequence[str] | None,
     without: str | Sequence[str] | None,
+    per: float | None,
     unseen: Literal["error", "base", "average"],
     missing: Literal["keep", "error"],
 ) -> FloatArray | pd.DataFrame:
@@ -43,7 +47,8 @@ def predict(
         raise ModelError(
             "An interval for a new observation needs the whole model: no only=/without=."
         )
-    rows = new_rows(estimate, new, unseen=unseen, missing=missing)
+    roles, known = _offsets(estimate, per) if only is None else ({}, 0.0)
+    rows = new_rows(estimate, new, unseen=unseen, missing=missing, roles=roles)
     design = estimate.design
     values = {key: column.values for key, column in rows.columns.items()}
     columns = design.matrix(_filled(values), rows.n)
@@ -51,6 +56,8 @@ def predict(
         [[0] if only is None else [], *(design.places(j) for j in chosen)]
     ).astype(np.int64)
     result, error = linear(estimate, columns[:, places], places)
+    error = np.sqrt(error**2 + _between_levels(estimate, chosen, rows))
+    result += rows.offset + known
     absent = rows.missing
     result[absent] = np.nan
     error[absent] = np.nan
@@ -72,18 +79,92 @@ def predict(
     mean = estimate.outcome.mean if scale == "outcome" else _same
     if interval is None:
         return mean(result)
-    spread = np.sqrt(error**2 + estimate.scale) if new_observation else error
-    half = quantile(estimate, interval) * spread
+    if new_observation and not estimate.outcome.plain:
+        spread, lower, upper = observation_interval(estimate, result, error, interval)
+    else:
+        spread = np.sqrt(error**2 + estimate.scale) if new_observation else error
+        half = quantile(estimate, interval) * spread
+        lower, upper = mean(result - half), mean(result + half)
+        if scale == "outcome" and not estimate.outcome.plain:
+            # The delta method; the interval itself is the linear predictor's, taken through.
+            spread = error * np.abs(estimate.outcome.mean_slope(result))
     return pd.DataFrame(
         {
             "prediction": mean(result),
             "std_error": spread,
-            "lower": mean(result - half),
-            "upper": mean(result + half),
+            "lower": np.minimum(lower, upper),
+            "upper": np.maximum(lower, upper),
             "outside": outside & ~absent,
         },
         index=rows.index,
     )
+
+
+def observation_interval(
+    estimate: Estimate, eta: FloatArray, error: FloatArray, level: float
+) -> tuple[FloatArray, FloatArray, FloatArray]:
+    """Standard deviation, lower and upper limit of a new observation, each (n,).
+
+    Quantiles of draws of the outcome about draws of its mean, with a fixed seed.
+    """
+    check_level(level)
+    rng = np.random.default_rng(DEFAULT_SEED)
+    limits = np.full((3, len(eta)), np.nan)
+    for i in np.flatnonzero(np.isfinite(eta)):
+        mean = estimate.outcome.mean(eta[i] + error[i] * rng.standard_normal(DRAWS))
+        values = estimate.outcome.draw(mean, estimate.scale, rng)
+        limits[0, i] = values.std()
+        limits[1:, i] = np.quantile(values, [0.5 - level / 2, 0.5 + level / 2])
+    return limits[0], limits[1], limits[2]
+
+
+def _offsets(estimate: Estimate, per: float | None) -> tuple[dict[str, str], float]:
+    """Expressions to be found in the new rows for the offset, and a constant beside them."""
+    given = {k: v for k, v in estimate.arguments.items() if k in ("offset", "exposure")}
+    known = 0.0
+    if per is not None:
+        if "exposure" not in given:
+            raise ModelError("per= has a meaning only for a fit with exposure=.")
+        if isinstance(per, bool) or not isinstance(per, int | float) or not 0 < per < np.inf:
+            raise ModelError(f"per= is a positive exposure, such as 1; got {per!r}.")
+        known = float(np.log(per))
+        del given["exposure"]
+    if given.get("exposure", "").startswith("<"):
+        raise ModelError(
+            "The fit's exposure was given by values, so new rows have none: write per=1 for "
+            "predictions per unit of exposure."
+        )
+    if given.get("offset", "").startswith("<"):
+        warnings.warn(
+            "The fit's offset was given by values: predictions are at offset 0.",
+            Caution,
+            stacklevel=4,
+        )
+        del given["offset"]
+    return given, known
+
+
+def _between_levels(estimate: Estimate, chosen: Sequence[int], rows: NewRows) -> FloatArray:
+    """Variance of a level's effect about the average, for rows whose level is not known, (n,)."""
+    total = np.zeros(rows.n)
+    for j in chosen:
+        (space,) = estimate.design.components[j].spaces
+        if not isinstance(space, Levels) or space.key not in rows.unseen:
+            continue
+        codes = np.arange(len(space.labels))
+        own = estimate.design.component_matrix(j, {space.key: codes})
+        effects = own @ estimate.coefficients[estimate.design.places(j)]
+        between = float(estimate.design.spreads[space.key].shares @ effects**2)
+        unknown = rows.columns[space.key].values == UNSEEN_LEVEL
+        total[unknown] += between
+        if unknown.any():
+            warnings.warn(
+                f"{int(unknown.sum())} rows have a level of {space.key} that the fit has not seen: "
+                "they stand at the average of the levels, with intervals as wide as levels differ.",
+                Caution,
+                stacklevel=4,
+            )
+    return total
 
 
 def model_columns(estimate: Estimate, new: object) -> pd.DataFrame:
@@ -95,7 +176,14 @@ def model_columns(estimate: Estimate, new: object) -> pd.DataFrame:
     return pd.DataFrame(raw, index=rows.index, columns=list(design.names))
 
 
-def new_rows(estimate: Estimate, new: object, *, unseen: str, missing: str) -> NewRows:
+def new_rows(
+    estimate: Estimate,
+    new: object,
+    *,
+    unseen: str,
+    missing: str,
+    roles: Mapping[str, str] = MappingProxyType({}),
+) -> NewRows:
     """Read new rows against the fitted columns; unseen levels as asked for."""
     if new is None:
         raise DataError("Give the new rows to predict: a table, a mapping or a file.")
@@ -104,7 +192,7 @@ def new_rows(estimate: Estimate, new: object, *, unseen: str, missing: str) -> N
         for factor in term.factors:
             for expression in factor.arguments:
                 expressions[column_key(factor, expression)] = expression
-    rows = read_new(new, estimate.design.columns, expressions, missing=missing)
+    rows = read_new(new, estimate.design.columns, expressions, roles=roles, missing=missing)
     if rows.unseen and unseen == "error":
         key, found = next(iter(rows.unseen.items()))
         first = found[0]

@@ -26,7 +26,7 @@ from addmodel.errors import DataError
 from addmodel.estimate import Estimate, Reading
 from addmodel.files import replacing
 from addmodel.formula import Model, parse
-from addmodel.outcomes import Outcome, outcome_named
+from addmodel.outcomes import Outcome, outcome_described
 from addmodel.spaces.curve import Curve
 from addmodel.spaces.cycle import Cycle
 from addmodel.spaces.levels import Levels
@@ -120,7 +120,7 @@ def _encoded(value: Any, arrays: list[np.ndarray[Any, Any]]) -> Any:
     if isinstance(value, Model):
         return {"formula": value.text}
     if isinstance(value, Outcome):
-        return {"outcome": value.name}
+        return {"outcome": _encoded(value.described(), arrays)}
     if dataclasses.is_dataclass(value):
         fields = {
             f.name: _encoded(getattr(value, f.name), arrays) for f in dataclasses.fields(value)
@@ -149,7 +149,7 @@ def _decoded(value: Any, members: Mapping[str, bytes]) -> Any:
     if "formula" in value:
         return parse(value["formula"])
     if "outcome" in value:
-        return outcome_named(value["outcome"])
+        return outcome_described(_decoded(value["outcome"], members))
     if "array" in value:
         content = io.BytesIO(members[f"arrays/{int(value['array'])}.npy"])
         array = np.lib.format.read_array(content, allow_pickle=False)

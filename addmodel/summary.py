@@ -82,7 +82,7 @@ def _how(estimate: Estimate) -> str:
     ]
     note = f" ({', '.join(left_out)})" if left_out else ""
     counted = f", which stand for {estimate.n:,.0f}" if estimate.n != rows.used else ""
-    by = {"reml": "REML", "gcv": "GCV"}[estimate.criterion]
+    by = {"reml": "REML", "gcv": "GCV", "ubre": "UBRE"}[estimate.criterion]
     value = f"{by} = {estimate.criterion_value:,.3f}"
     steps = "step" if estimate.steps == 1 else "steps"
     return (
@@ -93,20 +93,18 @@ def _how(estimate: Estimate) -> str:
 
 def _words(estimate: Estimate) -> str:
     name = estimate.model.outcome.text
-    sentences = [
-        f"{name} is taken as Gaussian about its mean, with standard deviation "
-        f"{np.sqrt(estimate.scale):.4g}."
-    ]
+    sentences = [outcome_words(estimate)]
     terms = [_term_words(estimate, j) for j in range(len(estimate.design.components))]
     if terms:
         listed = terms[0] if len(terms) == 1 else ", ".join(terms[:-1]) + " and " + terms[-1]
-        sentences.append(f"The mean is an intercept plus {listed}.")
+        sentences.append(f"{predictor_words(estimate)} is an intercept plus {listed}.")
     else:
-        sentences.append("The mean is one constant.")
+        sentences.append(f"{predictor_words(estimate)} is one constant.")
     reduction = deviance_reduction(estimate)
+    taken = f"the variance of {name}" if estimate.outcome.plain else "the null deviance"
     sentences.append(
         f"The model has {1 + sum_df(estimate):.1f} effective degrees of freedom and takes away "
-        f"{100 * reduction:.1f} % of the null deviance."
+        f"{_percent(reduction)} of {taken}."
     )
     bending = [
         j for j, c in enumerate(estimate.design.components) if isinstance(c.spaces[0], Penalised)
@@ -118,7 +116,7 @@ def _words(estimate: Estimate) -> str:
         sentences.append(
             "The detail was confirmed: more functions would change nothing."
             if not unsure
-            else f"The detail of {', '.join(unsure)} is bound: more functions would be used."
+            else f"The detail of {', '.join(unsure)} is bound: more functions might be used."
         )
     straight = [estimate.design.components[j].name for j in bending if estimate.at_infinity(j)]
     if straight:
@@ -130,6 +128,38 @@ def _words(estimate: Estimate) -> str:
     return " ".join(sentences)
 
 
+def outcome_words(estimate: Estimate) -> str:
+    """What is assumed of the outcome, and how widely it varies."""
+    name, outcome = estimate.model.outcome.text, estimate.outcome
+    if outcome.plain:
+        spread = np.sqrt(estimate.scale)
+        return f"{name} is taken as Gaussian about its mean, with standard deviation {spread:.4g}."
+    event = f" (counted: {estimate.reading.event})" if estimate.reading.event else ""
+    about = f"{name}{event} is taken as {outcome.name} about its mean"
+    if outcome.dispersion_free:
+        alpha = float(outcome.family.alpha)
+        return f"{about}, with variance μ + {alpha:.3g} μ²."
+    pearson = f"Pearson's dispersion is {estimate.dispersion:.2f}"
+    if outcome.scale_known:
+        return f"{about}. {pearson}; the scale is taken as 1."
+    return f"{about}, with scale {estimate.scale:.4g}. {pearson}."
+
+
+LINK_WORDS = {
+    "Identity": "The mean",
+    "Log": "The log of the mean",
+    "Logit": "The log odds",
+    "Probit": "The probit of the mean",
+    "CLogLog": "The complementary log-log of the mean",
+}
+
+
+def predictor_words(estimate: Estimate) -> str:
+    """What the sum of the components is, by the link."""
+    link = type(estimate.outcome.family.link).__name__
+    return LINK_WORDS.get(link, f"The linear predictor (link {link})")
+
+
 def _term_words(estimate: Estimate, j: int) -> str:
     (space,) = estimate.design.components[j].spaces
     if isinstance(space, Line):
@@ -137,7 +167,9 @@ def _term_words(estimate: Estimate, j: int) -> str:
     if isinstance(space, Levels):
         return f"the {len(space.labels)} levels of {space.key} (base: {space.labels[space.base]})"
     if isinstance(space, Cycle):
-        return f"a cycle of {space.key} (period {space.period})"
+        length = space.period if isinstance(space.period, str) else f"{space.period:g}"
+        days = " days" if estimate.design.columns[space.key].kind == "date" else ""
+        return f"a cycle of {space.key} (period {length}{days if length[0].isdigit() else ''})"
     if estimate.at_infinity(j):
         return f"a curve of {space.key}, which came out straight"
     return f"a curve of {space.key}"
@@ -157,7 +189,7 @@ def _recipe(estimate: Estimate) -> str:
     arguments = [repr(estimate.model.text), "data"]
     if estimate.criterion != "reml":
         arguments.append(f'criterion="{estimate.criterion}"')
-    arguments += [f"{name}={value}" for name, value in estimate.arguments.items()]
+    arguments += [f"{name}={_quoted(value)}" for name, value in estimate.arguments.items()]
     return f"addmodel.fit({', '.join(arguments)})"
 
 
@@ -171,12 +203,21 @@ def _components_text(table: pd.DataFrame) -> str:
     shown = pd.DataFrame(
         {
             "effective df": [f"{v:.2f}" for v in table["effective_df"]],
-            "share": [f"{100 * v:.1f} %" if np.isfinite(v) else "" for v in table["share"]],
+            "share": [_percent(v) for v in table["share"]],
             "smoothing": [_smoothing_text(v) for v in table["smoothing"]],
         },
         index=list(table.index),
     )
     return textwrap.indent(shown.to_string(), "  ")
+
+
+def _quoted(value: str) -> str:
+    """Text in quotes; what was given by values stands between angle brackets as it is."""
+    return value if value.startswith("<") else f'"{value}"'
+
+
+def _percent(part: float) -> str:
+    return f"{100 * part + 0.0:.1f} %".replace("-0.0 %", "0.0 %") if np.isfinite(part) else ""
 
 
 def _smoothing_text(value: float) -> str:

@@ -8,7 +8,8 @@ from addmodel.component import Design
 from addmodel.data import read
 from addmodel.estimate import Laid
 from addmodel.formula import parse
-from addmodel.outcomes import outcome_named
+from addmodel.outcomes import outcome_for
+from addmodel.solve.criteria import CRITERIA
 from addmodel.solve.quadratic import Problem
 
 DATA = Path(__file__).parent / "data"
@@ -25,5 +26,6 @@ def problem_for(formula: str, data: object) -> Problem:
     """The reduced penalised quadratic of a model on data, summed about its start."""
     model = parse(formula)
     table = read(data, model)
-    laid = Laid.on(Design.lay(model, table), table, outcome_named("gaussian"))
-    return laid.problem(laid.start)
+    outcome = outcome_for("gaussian")
+    laid = Laid.on(Design.lay(model, table), table, outcome, CRITERIA["reml"], 1.0)
+    return laid.modes.quadratic(laid.start, fisher=True)

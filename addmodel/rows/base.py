@@ -43,9 +43,28 @@ class Rows(ABC):
 
     @abstractmethod
     def sweep(
-        self, coefficients: FloatArray, outcome: Outcome, gram: FloatArray | None = None
+        self,
+        coefficients: FloatArray,
+        outcome: Outcome,
+        *,
+        fisher: bool = False,
+        gram: FloatArray | None = None,
     ) -> Sums:
-        """Sums over all rows at the coefficients (P,); `gram` where it is known already."""
+        """Sums over all rows at the coefficients (P,).
+
+        X'WX has the observed weights, or the Fisher weights if asked for; `gram` where it is known
+        already.
+        """
+
+    @abstractmethod
+    def deviance(self, coefficients: FloatArray, outcome: Outcome) -> float:
+        """The deviance alone."""
+
+    @abstractmethod
+    def leverage_sweep(
+        self, coefficients: FloatArray, outcome: Outcome, inner: FloatArray, *, fisher: bool = False
+    ) -> FloatArray:
+        """Σ_i (x_i' M x_i) w_i′ x_i (P,), M = `inner`, w′ the derivative of the weight in η."""
 
     @abstractmethod
     def linear_predictor(self, coefficients: FloatArray) -> FloatArray:

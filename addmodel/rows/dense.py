@@ -17,24 +17,48 @@ class DenseRows(Rows):
 
     columns: FloatArray  # (n, P)
     y: FloatArray  # (n,)
-    weights: FloatArray  # (n,) prior weight times count
+    weights: FloatArray  # (n,) prior weight, times count, times trials
     offset: FloatArray  # (n,)
 
     def sweep(
-        self, coefficients: FloatArray, outcome: Outcome, gram: FloatArray | None = None
+        self,
+        coefficients: FloatArray,
+        outcome: Outcome,
+        *,
+        fisher: bool = False,
+        gram: FloatArray | None = None,
     ) -> Sums:
         eta = self.linear_predictor(coefficients)
-        slope, weight = outcome.slope_and_weight(self.y, eta, self.weights)
+        curvature = outcome.curvature(self.y, eta, self.weights)
         if gram is None:
-            plain = bool((weight == 1).all())
-            rooted = self.columns if plain else self.columns * np.sqrt(weight)[:, None]
-            gram = rooted.T @ rooted
+            gram = self._gram(curvature.fisher if fisher else curvature.observed)
         return Sums(
             at=coefficients,
             gram=gram,
-            score=self.columns.T @ slope,
+            score=self.columns.T @ curvature.slope,
             deviance=outcome.deviance(self.y, outcome.mean(eta), self.weights),
         )
+
+    def _gram(self, weight: FloatArray) -> FloatArray:
+        if (weight == 1).all():
+            return self.columns.T @ self.columns
+        if weight.min() < 0:
+            return self.columns.T @ (self.columns * weight[:, None])
+        rooted = self.columns * np.sqrt(weight)[:, None]
+        return rooted.T @ rooted
+
+    def deviance(self, coefficients: FloatArray, outcome: Outcome) -> float:
+        mean = outcome.mean(self.linear_predictor(coefficients))
+        return outcome.deviance(self.y, mean, self.weights)
+
+    def leverage_sweep(
+        self, coefficients: FloatArray, outcome: Outcome, inner: FloatArray, *, fisher: bool = False
+    ) -> FloatArray:
+        eta = self.linear_predictor(coefficients)
+        observed, expected = outcome.weight_slopes(self.y, eta, self.weights)
+        leverage = np.einsum("ij,ij->i", self.columns @ inner, self.columns)
+        total: FloatArray = self.columns.T @ (leverage * (expected if fisher else observed))
+        return total
 
     def linear_predictor(self, coefficients: FloatArray) -> FloatArray:
         eta: FloatArray = self.offset + self.columns @ coefficients

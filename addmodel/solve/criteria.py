@@ -42,69 +42,114 @@ class Criterion(ABC):
 
 
 class Reml(Criterion):
-    """Restricted maximum likelihood (Patterson & Thompson 1971; Wahba 1985), σ² profiled.
+    """Restricted maximum likelihood (Patterson & Thompson 1971; Wahba 1985), outside the Gaussian
+    case Laplace's approximation to it (Tierney & Kadane 1986, J. Am. Stat. Assoc. 81).
 
-    cost = ½[(n − p)(log 2πσ̂² + 1) + log|A| − Σ q_j ρ_j − log|T'T| − Σ log w],
-    σ̂² = (D + Σλ‖u‖²)/(n − p): minus the log density of orthonormal contrasts of the rows.
+    cost = D_p/(2φ) − ℓ_sat(φ) + ½[log|A| − Σ q_j ρ_j − p log 2πφ − log|T'T|], D_p = D + Σλ‖u‖²,
+    φ known or profiled: minus the log density of orthonormal contrasts of the rows, all constants
+    in. Its gradient is ½[λ_j‖u_j‖²/φ + λ_j tr(A⁻¹)_jj − q_j] and ½ d log|A|/dρ_j through the
+    weights, which the Hessian leaves out (it is exact in the Gaussian case).
     """
 
     name = "reml"
 
     def scale(self, point: Point) -> float:
-        return point.penalised_deviance / (point.problem.n - point.problem.p)
+        return point.problem.likelihood.scale(point.penalised_deviance, point.problem.p)
 
     def cost(self, point: Point) -> float:
-        problem = point.problem
-        variance = self.scale(point)
-        if variance <= 0:
+        problem, scale = point.problem, self.scale(point)
+        if not scale > 0:
             return np.inf
-        cost: float = 0.5 * (
-            (problem.n - problem.p) * (np.log(2 * np.pi * variance) + 1)
-            + problem.log_det_unpenalised
-            + point.log_det_schur
-            - float(np.log(point.ridge).sum())
-            - problem.log_det_design
-            - problem.log_weights
+        cost: float = (
+            point.penalised_deviance / (2 * scale)
+            - problem.likelihood.saturated(scale)
+            + 0.5
+            * (
+                problem.log_det_unpenalised
+                + point.log_det_schur
+                - float(np.log(point.ridge).sum())
+                - problem.p * np.log(2 * np.pi * scale)
+                - problem.log_det_design
+            )
         )
-        return cost
+        return cost if np.isfinite(cost) else np.inf
 
     def reported(self, point: Point) -> float:
         return -self.cost(point)
 
     def gradient(self, point: Point) -> FloatArray:
         sizes = np.array([point.problem.sizes[j] for j in point.blocks], dtype=np.float64)
-        return 0.5 * (point.roughness / self.scale(point) + point.lost - sizes)
+        return 0.5 * (point.roughness / self.scale(point) + point.lost - sizes) + point.drift
 
     def hessian(self, point: Point) -> FloatArray:
-        variance = self.scale(point)
-        rough = point.roughness
+        scale, rough = self.scale(point), point.roughness
+        slope = point.problem.likelihood.scale_slope(point.penalised_deviance, point.problem.p)
         lam = point.smoothing[point.blocks]
         both = np.outer(lam, lam)
         pushes = point.by_block()
         return (
-            np.diag(0.5 * (rough / variance + point.lost))
+            np.diag(0.5 * (rough / scale + point.lost))
             - 0.5 * both * point.block_sums(point.inverse, point.inverse)
-            - pushes.T @ point.inverse @ pushes / variance
-            - 0.5
-            * np.outer(rough / variance, rough / variance)
-            / (point.problem.n - point.problem.p)
+            - pushes.T @ point.inverse @ pushes / scale
+            - 0.5 * slope * np.outer(rough / scale, rough / scale)
         )
 
 
-class Gcv(Criterion):
-    """Generalised cross-validation (Craven & Wahba 1979), n D/(n − τ)², as its logarithm.
+class Prediction(Criterion):
+    """What GCV and UBRE share: the deviance D and τ = tr(A⁻¹X'WX) with their derivatives.
 
-    With P_j = λ_j on block j, b_j = ∂β/∂ρ_j = −A⁻¹P_jβ and Q = A⁻¹ΛA⁻¹:
+    With P_j = λ_j on block j, b_j = ∂β/∂ρ_j = −A⁻¹P_jβ and Q = A⁻¹ΛA⁻¹, the weights held:
     ∂D/∂ρ_j = −2 β'Λ b_j,  ∂²D = 2 b_j'(A − Λ)b_k + 2 β'ΛA⁻¹(P_k b_j + P_j b_k) − 2δ_jk β'Λb_j,
     ∂τ/∂ρ_j = −t_j + tr(QP_j) with t_j = λ_j tr(A⁻¹)_jj,
     ∂²τ = −δ_jk t_j + 2 λ_jλ_k‖(A⁻¹)_jk‖² + δ_jk tr(QP_j) − 2 λ_jλ_k⟨(A⁻¹)_jk, Q_jk⟩.
+    Outside the Gaussian case the gradient also has the weights' change; the Hessian leaves it out.
     """
 
-    name = "gcv"
     rough_optima = True
 
+    def slopes(self, point: Point) -> tuple[FloatArray, FloatArray]:
+        """∂D and ∂τ, each (blocks,)."""
+        smoothed = (point.inverse * point.ridge) @ point.inverse
+        d_deviance = -2 * (point.ridge * point.u) @ point.coefficient_moves()
+        pulled = point.ridge * np.diag(smoothed)
+        d_tau = np.array([pulled[s].sum() for s in point.places]) - point.lost
+        return d_deviance, d_tau + point.tau_drift
+
+    def curvatures(self, point: Point) -> tuple[FloatArray, FloatArray]:
+        """∂²D and ∂²τ, each (blocks, blocks), the weights held."""
+        moves = -point.inverse @ point.by_block()
+        smoothed = (point.inverse * point.ridge) @ point.inverse
+        diagonal = -2 * (point.ridge * point.u) @ moves
+        pulled = point.ridge * np.diag(smoothed)
+        d_tau = np.array([pulled[s].sum() for s in point.places]) - point.lost
+        lam = point.smoothing[point.blocks]
+        both = np.outer(lam, lam)
+        pushes = point.by_block()
+        # β'ΛA⁻¹P_k b_j: the pull ΛA⁻¹… of each active coefficient, block by block.
+        pulled = point.inverse @ (point.ridge * point.u)
+        cross = np.array([(lam[k] * pulled[s]) @ moves[s] for k, s in enumerate(point.places)])
+        cross = cross.reshape(len(lam), len(lam))
+        dd_deviance = (
+            2 * (-pushes.T @ moves - moves.T @ (point.ridge[:, None] * moves))
+            + 2 * (cross + cross.T)
+            + np.diag(diagonal)
+        )
+        dd_tau = (
+            np.diag(d_tau)
+            + 2 * both * point.block_sums(point.inverse, point.inverse)
+            - 2 * both * point.block_sums(point.inverse, smoothed)
+        )
+        return dd_deviance, dd_tau
+
+
+class Gcv(Prediction):
+    """Generalised cross-validation (Craven & Wahba 1979), n D/(n − τ)², as its logarithm."""
+
+    name = "gcv"
+
     def scale(self, point: Point) -> float:
-        return point.deviance / (point.problem.n - point.effective_df)
+        fixed = point.problem.likelihood.fixed
+        return point.deviance / (point.problem.n - point.effective_df) if fixed is None else fixed
 
     def cost(self, point: Point) -> float:
         n = point.problem.n
@@ -116,48 +161,47 @@ class Gcv(Criterion):
     def reported(self, point: Point) -> float:
         return float(np.exp(self.cost(point)))
 
-    def _parts(self, point: Point) -> tuple[FloatArray, FloatArray, FloatArray, FloatArray]:
-        """b (k, blocks), Q (k, k), ∂D and ∂τ (blocks,)."""
-        moves = -point.inverse @ point.by_block()
-        smoothed = (point.inverse * point.ridge) @ point.inverse
-        d_deviance = -2 * (point.ridge * point.u) @ moves
-        pulled = point.ridge * np.diag(smoothed)
-        d_tau = np.array([pulled[s].sum() for s in point.places]) - point.lost
-        return moves, smoothed, d_deviance, d_tau
-
     def gradient(self, point: Point) -> FloatArray:
-        _, _, d_deviance, d_tau = self._parts(point)
-        left = point.problem.n - point.effective_df
-        return d_deviance / point.deviance + 2 * d_tau / left
+        d_deviance, d_tau = self.slopes(point)
+        return d_deviance / point.deviance + 2 * d_tau / (point.problem.n - point.effective_df)
 
     def hessian(self, point: Point) -> FloatArray:
-        moves, smoothed, d_deviance, d_tau = self._parts(point)
-        n, deviance = point.problem.n, point.deviance
-        left = n - point.effective_df
-        lam = point.smoothing[point.blocks]
-        both = np.outer(lam, lam)
-        pushes = point.by_block()
-        # β'ΛA⁻¹P_k b_j: the pull ΛA⁻¹… of each active coefficient, block by block.
-        pulled = point.inverse @ (point.ridge * point.u)
-        cross = np.array([(lam[k] * pulled[s]) @ moves[s] for k, s in enumerate(point.places)])
-        cross = cross.reshape(len(lam), len(lam))
-        dd_deviance = (
-            2 * (-pushes.T @ moves - moves.T @ (point.ridge[:, None] * moves))
-            + 2 * (cross + cross.T)
-            + np.diag(d_deviance)
-        )
-        dd_tau = (
-            np.diag(d_tau)
-            + 2 * both * point.block_sums(point.inverse, point.inverse)
-            - 2 * both * point.block_sums(point.inverse, smoothed)
-        )
+        d_deviance, d_tau = self.slopes(point)
+        dd_deviance, dd_tau = self.curvatures(point)
+        d, t = d_deviance / point.deviance, d_tau / (point.problem.n - point.effective_df)
         hessian: FloatArray = (
-            dd_deviance / deviance
-            - np.outer(d_deviance / deviance, d_deviance / deviance)
-            + 2 * dd_tau / left
-            + 2 * np.outer(d_tau / left, d_tau / left)
+            dd_deviance / point.deviance
+            - np.outer(d, d)
+            + 2 * dd_tau / (point.problem.n - point.effective_df)
+            + 2 * np.outer(t, t)
         )
         return hessian
 
 
-CRITERIA: dict[str, Criterion] = {c.name: c for c in (Reml(), Gcv())}
+class Ubre(Prediction):
+    """Unbiased risk estimate for a known scale (Craven & Wahba 1979): (D + 2φτ)/n − φ."""
+
+    name = "ubre"
+
+    def scale(self, point: Point) -> float:
+        fixed = point.problem.likelihood.fixed
+        assert fixed is not None
+        return fixed
+
+    def cost(self, point: Point) -> float:
+        scale, n = self.scale(point), point.problem.n
+        return (point.deviance + 2 * scale * point.effective_df) / n - scale
+
+    def reported(self, point: Point) -> float:
+        return self.cost(point)
+
+    def gradient(self, point: Point) -> FloatArray:
+        d_deviance, d_tau = self.slopes(point)
+        return (d_deviance + 2 * self.scale(point) * d_tau) / point.problem.n
+
+    def hessian(self, point: Point) -> FloatArray:
+        dd_deviance, dd_tau = self.curvatures(point)
+        return (dd_deviance + 2 * self.scale(point) * dd_tau) / point.problem.n
+
+
+CRITERIA: dict[str, Criterion] = {c.name: c for c in (Reml(), Gcv(), Ubre())}

@@ -17,6 +17,7 @@ import numpy as np
 import scipy.linalg
 from scipy.linalg.lapack import dpotrf, dpotri, dpotrs
 
+from addmodel.outcomes.likelihood import Likelihood
 from addmodel.rows.base import Sums
 from addmodel.spaces.base import FloatArray
 
@@ -43,8 +44,7 @@ class Problem:
     base: float  # deviance there, the others at their best
     log_det_unpenalised: float  # log|G_tt|
     log_det_design: float  # log|T'T|, T the unpenalised columns without weights
-    log_weights: float  # Σ log w over the rows
-    n: float  # rows, counts counted
+    likelihood: Likelihood
 
     @classmethod
     def of(
@@ -52,12 +52,16 @@ class Problem:
         sums: Sums,
         p: int,
         sizes: Sequence[int],
-        *,
         log_det_design: float,
-        log_weights: float,
-        n: float,
+        likelihood: Likelihood,
     ) -> Problem:
-        """Reduce the sums of a sweep."""
+        """Reduce the sums of a sweep.
+
+        Raises
+        ------
+        numpy.linalg.LinAlgError
+            If X'WX of the unpenalised columns is not positive definite.
+        """
         factor = scipy.linalg.cho_factor(sums.gram[:p, :p], lower=True)
         cross = scipy.linalg.cho_solve(factor, sums.gram[:p, p:])
         schur = sums.gram[p:, p:] - sums.gram[p:, :p] @ cross
@@ -72,9 +76,13 @@ class Problem:
             - float(sums.score[:p] @ scipy.linalg.cho_solve(factor, sums.score[:p])),
             log_det_unpenalised=2 * float(np.log(np.diag(factor[0])).sum()),
             log_det_design=log_det_design,
-            log_weights=log_weights,
-            n=n,
+            likelihood=likelihood,
         )
+
+    @property
+    def n(self) -> float:
+        """Rows, counts counted."""
+        return self.likelihood.n
 
     @property
     def spanned(self) -> list[bool]:
@@ -155,6 +163,32 @@ class Point:
     factor: FloatArray  # (k, k) lower Cholesky factor of S + Λ
     u: FloatArray  # (k,)
     penalised_deviance: float  # D(β̂) + Σ λ ‖u‖², the minimum
+
+    def elsewhere(self, smoothing: FloatArray) -> Point:
+        """The solution at other smoothing parameters."""
+        return self.problem.at(smoothing)
+
+    @property
+    def drift(self) -> FloatArray:
+        """½ d log|A|/dρ_j through the weights: nothing where they do not change with the mean."""
+        return np.zeros(len(self.blocks))
+
+    @property
+    def tau_drift(self) -> FloatArray:
+        """dτ/dρ_j through the weights."""
+        return np.zeros(len(self.blocks))
+
+    def full_moves(self) -> FloatArray:
+        """∂β/∂ρ_j of all coefficients, (P, blocks)."""
+        pushes = np.zeros((len(self.problem.sums.at), len(self.blocks)))
+        pushes[self.problem.p + self.index] = self.by_block()
+        moves: FloatArray = -self.covariance() @ pushes
+        return moves
+
+    def coefficient_moves(self) -> FloatArray:
+        """∂u/∂ρ_j = −A⁻¹P_j β of the active coefficients, (k, blocks)."""
+        moves: FloatArray = -self.inverse @ self.by_block()
+        return moves
 
     @property
     def log_det_schur(self) -> float:

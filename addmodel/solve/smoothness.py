@@ -17,6 +17,7 @@ import scipy.optimize
 
 from addmodel.errors import ModelError
 from addmodel.solve.criteria import Criterion
+from addmodel.solve.pirls import Modes
 from addmodel.solve.quadratic import IndexArray, Point, Problem
 from addmodel.spaces.base import FloatArray
 
@@ -27,6 +28,9 @@ ROUGHLY = 1e-5
 """The same while starts are compared."""
 COMMON = (3.0, 8.0, 20.0)
 """Effective degrees of freedom of a block at common starts."""
+MODALLY = 1e-8
+"""The same where the Hessian leaves out the weights' change, so that the last steps are many."""
+ROUNDS = 8
 NEAR = 1.5
 """A place closer than this to the present one, in log λ, need not be looked at."""
 LONGEST_STEP = 4.0
@@ -123,6 +127,44 @@ def ridge_reaching(problem: Problem, smoothing: FloatArray, block: int, target: 
     return float(
         np.exp(scipy.optimize.brentq(excess, bounds.lower[block], bounds.upper[block], xtol=1e-11))
     )
+
+
+def choose_mode(
+    modes: Modes,
+    criterion: Criterion,
+    fixed: Sequence[float | None],
+    degrees: Sequence[float | None],
+    start: FloatArray,
+) -> Smoothness:
+    """As `choose`, where the weights change with the mean; the optimum of the criterion itself.
+
+    Choosing on the working model, and the mode there, in turn, is only the start: then Newton on
+    the criterion at the mode, whose smoothing parameters are looked at over their range as well.
+    """
+    beta, steps = start, 0
+    smoothing: FloatArray | None = None
+    for _ in range(ROUNDS):
+        working = choose(modes.quadratic(beta, fisher=True), criterion, fixed, degrees)
+        steps += working.steps
+        point = modes.at(working.point.smoothing, beta)
+        beta = point.mode
+        if smoothing is not None and _close(point.smoothing, smoothing):
+            break
+        smoothing = point.smoothing
+    free = np.flatnonzero([f is None and d is None for f, d in zip(fixed, degrees, strict=True)])
+    best = newton(point, criterion, free, MODALLY)
+    steps += best.steps
+    for _ in range(len(free) + 1):
+        problem = best.point.problem
+        better = look_around(problem.at(best.point.smoothing), problem, criterion, free)
+        if better is None:
+            break
+        found = newton(best.point.elsewhere(better), criterion, free, MODALLY)
+        steps += found.steps
+        if not criterion.cost(found.point) < criterion.cost(best.point) - 1e-9:
+            break
+        best = found
+    return replace(best, steps=steps)
 
 
 def choose_free(problem: Problem, criterion: Criterion, given: FloatArray) -> Smoothness:
@@ -254,7 +296,7 @@ def newton(
         for _ in range(25):
             trial = point.smoothing.copy()
             trial[names] = np.exp(np.clip(rho + step, bounds.lower[names], bounds.upper[names]))
-            candidate = problem.at(trial)
+            candidate = point.elsewhere(trial)
             value = criterion.cost(candidate)
             if value < cost + 1e-13 * max(1.0, abs(cost)):  # within rounding a step may not show
                 moved = True
@@ -302,7 +344,7 @@ def hold_at_infinity(
         for j in gone:
             trial = point.smoothing.copy()
             trial[j] = np.inf
-            candidate = point.problem.at(trial)
+            candidate = point.elsewhere(trial)
             value = criterion.cost(candidate)
             if value <= cost:
                 point, cost = candidate, value

@@ -67,7 +67,7 @@ class Curve(Penalised):
 
     @property
     def unpenalised_names(self) -> tuple[str, ...]:
-        return (self.key,)
+        return (f"{self.key}: straight part",)
 
     def unpenalised(self, x: npt.NDArray[Any]) -> FloatArray:
         return np.asarray(x, dtype=np.float64)[:, None] - self.centre

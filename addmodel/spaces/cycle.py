@@ -11,6 +11,7 @@ import scipy.fft
 import scipy.linalg
 
 from addmodel.spaces.base import (
+    BoolArray,
     FloatArray,
     Penalised,
     choose_knots,
@@ -19,7 +20,8 @@ from addmodel.spaces.base import (
     support,
 )
 
-CALENDAR = ("year", "month", "week", "day")
+GAP = 0.2
+"""A longer part of the period without data counts as outside the data."""
 
 
 @dataclass(frozen=True)
@@ -28,6 +30,8 @@ class Cycle(Penalised):
 
     period: float | str
     """A length in the covariate's units, or for dates one of "year", "month", "week", "day"."""
+    gap: tuple[float, float]
+    """The longest stretch of the period without data: its start in [0, 1), and its length."""
 
     @classmethod
     def lay(
@@ -59,6 +63,7 @@ class Cycle(Penalised):
             gamma=gamma,
             cap=cap,
             period=period,
+            gap=_longest_gap(points),
         )
 
     @property
@@ -67,6 +72,13 @@ class Cycle(Penalised):
 
     def unpenalised(self, x: npt.NDArray[Any]) -> FloatArray:
         return np.empty((len(x), 0))
+
+    def outside(self, x: npt.NDArray[Any]) -> BoolArray:
+        """Inside a gap of more than GAP of the period nothing is known of the curve."""
+        start, length = self.gap
+        after = np.mod(phase(np.asarray(x, dtype=np.float64), self.period) - start, 1.0)
+        beyond: BoolArray = (after > 1e-9) & (after < length - 1e-9)
+        return beyond & (length > GAP)
 
     def scaled(self, x: npt.NDArray[Any]) -> FloatArray:
         t = phase(np.asarray(x, dtype=np.float64), self.period)
@@ -78,6 +90,12 @@ class Cycle(Penalised):
             transformed = transformed[:-1]  # the shortest wave has no sine beside its cosine
         pairs = np.sqrt(2.0) * np.stack([transformed.real, transformed.imag], axis=1)
         return np.asarray(pairs.ravel(), dtype=np.float64)
+
+
+def _longest_gap(points: FloatArray) -> tuple[float, float]:
+    steps = np.diff(points, append=points[0] + 1.0)
+    longest = int(steps.argmax())
+    return float(points[longest]), float(steps[longest])
 
 
 def phase(x: FloatArray, period: float | str) -> FloatArray:
