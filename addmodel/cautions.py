@@ -54,6 +54,17 @@ def of_smoothness(design: Design, smoothness: Smoothness) -> Iterator[str]:
             )
 
 
+def of_freedom(n: float, effective_df: float, counted: bool) -> Iterator[str]:
+    """A model that all but goes through every row."""
+    if n - effective_df < max(2.0, 0.05 * n):
+        means = " For means of several measurements give weights=, not counts=." if counted else ""
+        yield (
+            f"The model uses {effective_df:.1f} of {n:,.0f} degrees of freedom: it all but goes "
+            "through every row, so its scale, standard errors and intervals mean nothing. Set "
+            f"df= or detail=, or look for repeated rows.{means}"
+        )
+
+
 def of_outcome(
     design: Design, table: Table, outcome: Outcome, eta: FloatArray, dispersion: float
 ) -> Iterator[str]:

@@ -19,19 +19,17 @@ import numpy.typing as npt
 
 from addmodel.columns import Column, column_key
 from addmodel.data import Table
-from addmodel.errors import FormulaError, ModelError, nearest
+from addmodel.errors import FormulaError, nearest
 from addmodel.formula import Factor, Model, Term
 from addmodel.spaces.base import BoolArray, FloatArray, Penalised, Space
 from addmodel.spaces.curve import Curve
 from addmodel.spaces.cycle import Cycle
 from addmodel.spaces.levels import Levels
 from addmodel.spaces.line import Line
+from addmodel.spanning import check_rank, spanned
 
 Values = Mapping[str, npt.NDArray[Any]]
 """Covariate values by the key of their column, each (n,)."""
-
-DEPENDENT = 1e-9
-"""A standardised column closer than this to the span of others counts as spanned."""
 
 
 @dataclass(frozen=True)
@@ -139,6 +137,7 @@ class Design:
         bending = sum(f.kind in ("curve", "cycle") for t in model.terms for f in t.factors)
         components = tuple(_component(t, model, table, weights, bending) for t in model.terms)
         values = {key: column.values for key, column in table.columns.items()}
+        _refuse_twins(components, values, model)
         components, notes = _without_spanned(components, values)
         columns = [c.unpenalised(values) for c in components]
         raw = np.concatenate([np.empty((len(weights), 0)), *columns], axis=1)
@@ -146,7 +145,7 @@ class Design:
         centres = share @ raw
         scales = np.sqrt(share @ (raw - centres) ** 2)
         names = [name for c in components for name in c.unpenalised_names]
-        _check_rank((raw - centres) / scales, names)
+        check_rank((raw - centres) / scales, names)
         return cls(
             components=components,
             columns={k: replace(c, values=c.values[:0]) for k, c in table.columns.items()},
@@ -370,32 +369,14 @@ def _regrown(space: Penalised, size: int, x: FloatArray, weights: FloatArray) ->
 def _without_spanned(
     components: tuple[Component, ...], values: Values
 ) -> tuple[tuple[Component, ...], tuple[str, ...]]:
-    """Drop unpenalised columns that another component's unpenalised part already spans.
-
-    Of two components that span the same, the earlier keeps its columns.
-    """
-    parts = [_standardised(c.unpenalised(values)) for c in components]
-    gone: set[tuple[int, int]] = set()
-    notes = []
-
-    def remaining(j: int) -> FloatArray:
-        return parts[j][:, [k for k in range(parts[j].shape[1]) if (j, k) not in gone]]
-
-    for j, component in enumerate(components):
-        for k, name in enumerate(component.unpenalised_names):
-            column = parts[j][:, k]
-            for i in [i for i in range(len(components)) if i != j]:
-                other = remaining(i)
-                if not _spans(other, column):
-                    continue
-                mutual = all(_spans(remaining(j), other[:, c]) for c in range(other.shape[1]))
-                if mutual and i > j:
-                    continue
-                gone.add((j, k))
-                part = f"The straight part of {component.name}"
-                what = part if component.block_sizes else name
-                notes.append(f"{what} is already in {components[i].name}: it is kept once, there.")
-                break
+    """Drop unpenalised columns that another component's unpenalised part already spans."""
+    gone = spanned([c.unpenalised(values) for c in components])
+    notes: dict[str, None] = {}
+    for (j, k), i in gone.items():
+        own = components[j]
+        part = f"The straight part of {own.name}"
+        what = part if own.block_sizes else own.unpenalised_names[k]
+        notes[f"{what} is already in {components[i].name}: it is kept once, there."] = None
     kept = tuple(
         replace(c, own=tuple(k for k in c.own if (j, k) not in gone))
         for j, c in enumerate(components)
@@ -403,39 +384,14 @@ def _without_spanned(
     return kept, tuple(notes)
 
 
-def _standardised(columns: FloatArray) -> FloatArray:
-    centred = columns - columns.mean(axis=0)
-    lengths = np.maximum(np.linalg.norm(centred, axis=0), np.finfo(float).tiny)
-    standardised: FloatArray = centred / lengths
-    return standardised
-
-
-def _spans(others: FloatArray, column: FloatArray) -> bool:
-    """Whether a standardised column lies in the span of others (standardised, centred)."""
-    if others.shape[1] == 0:
-        return False
-    if others.shape[1] == 1 and abs(abs(float(others[:, 0] @ column)) - 1) > 1e-6:
-        return False  # the usual case, cheaply
-    solution = np.linalg.lstsq(others, column, rcond=None)[0]
-    return bool(np.linalg.norm(column - others @ solution) < DEPENDENT)
-
-
-def _check_rank(columns: FloatArray, names: Sequence[str]) -> None:
-    """Exact linear dependence among unpenalised columns is an error that names them."""
-    n, p = columns.shape
-    if p + 1 >= n:
-        raise ModelError(
-            f"The model has {p + 1} unpenalised coefficients and the data only {n} rows. "
-            f"Leave out terms, or merge levels."
-        )
-    if p == 0:
-        return
-    diagonal = np.abs(np.diag(np.linalg.qr(columns / np.sqrt(n))[1]))
-    for k in range(p):
-        if diagonal[k] < DEPENDENT:
-            solution = np.linalg.lstsq(columns[:, :k], columns[:, k], rcond=None)[0]
-            with_it = [names[i] for i in range(k) if abs(solution[i]) > 1e-6]
-            raise ModelError(
-                f"'{names[k]}' is a linear combination of {', '.join(repr(w) for w in with_it)}: "
-                f"the data cannot tell them apart. Leave one of them out of the formula."
+def _refuse_twins(components: tuple[Component, ...], values: Values, model: Model) -> None:
+    """Two curves of covariates that are straight functions of each other are one curve."""
+    curves = [c.spaces[0] for c in components if isinstance(c.spaces[0], Curve)]
+    for a, b in itertools.combinations(curves, 2):
+        x, z = a.scaled(values[a.key]), b.scaled(values[b.key])
+        if np.allclose(x, z, rtol=0, atol=1e-9) or np.allclose(x, 1 - z, rtol=0, atol=1e-9):
+            raise FormulaError(
+                f"{a.key} and {b.key} are straight functions of each other, so their curves are "
+                "one. Leave one of them out.",
+                model.text,
             )

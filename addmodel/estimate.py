@@ -220,6 +220,7 @@ def _estimate(
             *table.cautions,
             *design.notes,
             *cautions.of_smoothness(design, smoothness),
+            *cautions.of_freedom(likelihood.n, flat.effective_df, "counts" in arguments),
             *cautions.of_outcome(design, table, outcome, eta, dispersion),
         ),
         arguments=arguments,

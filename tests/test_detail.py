@@ -88,3 +88,16 @@ def test_what_is_left_over_is_found_in_its_band(kind):
         space = Cycle.lay("x", x, np.ones(n), 60, None, 1.0)
     residuals = 0.3 * np.sin(2 * np.pi * 55 * x) + rng.standard_normal(n)  # 110 half waves
     assert left_over(space, x, residuals, np.ones(n), 1.0) == 135  # the band from 90 to 135
+
+
+@pytest.mark.parametrize(("n", "cycles"), [(800, 22), (900, 28)])
+def test_waves_where_the_data_are_dense(n, cycles):
+    """On uneven points the kept functions cannot make waves that many rows could tell."""
+    rng = np.random.default_rng(n)
+    x = np.sort(np.exp(rng.standard_normal(n)))
+    wave = 2 * np.sin(2 * np.pi * cycles * np.arange(n) / n)
+    data = {"x": x, "y": wave + rng.standard_normal(n)}
+    fit, full = am.fit("y ~ curve(x)", data), am.fit('y ~ curve(x, detail="all")', data)
+    error = full.predict(data, interval=0.95)["std_error"].to_numpy()
+    assert (np.abs(fit.fitted - full.fitted) < 0.05 * error).mean() > 0.99
+    assert fit.effective_df == pytest.approx(full.effective_df, abs=1)

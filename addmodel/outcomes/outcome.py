@@ -149,7 +149,7 @@ class Outcome:
 
     def mean_slope(self, linear_predictor: FloatArray) -> FloatArray:
         """dμ/dη, (n,)."""
-        return inverse_link(self.family.link)(linear_predictor)[1]
+        return np.asarray(inverse_link(self.family.link)(linear_predictor)[1], dtype=np.float64)
 
     def draw(self, mean: FloatArray, scale: float, rng: np.random.Generator) -> FloatArray:
         """One outcome about each mean: a row of weight one, a binomial one of one trial.
@@ -159,7 +159,7 @@ class Outcome:
         """
         kind = self.kind
         if kind == "Gaussian":
-            return mean + np.sqrt(scale) * rng.standard_normal(mean.shape)
+            return np.asarray(rng.normal(mean, np.sqrt(scale)), dtype=np.float64)
         if kind == "Binomial":
             return (rng.uniform(size=mean.shape) < mean).astype(np.float64)
         if kind == "Gamma":

@@ -21,6 +21,8 @@ GROWTH = 1.5
 FASTEST = 4.0
 LEVEL = 0.001
 CELLS = 8192
+SLOWEST = 6
+"""Bands of waves begin about here."""
 
 
 def wanted(
@@ -61,14 +63,17 @@ def wanted(
 def left_over(
     space: Penalised, x: FloatArray, residuals: FloatArray, weights: FloatArray, scale: float
 ) -> int | None:
-    """End of the first band of waves beyond those kept that stands out of the noise, or None.
+    """A larger number of functions, where waves that those kept cannot make stand out of the noise.
 
-    The residuals are summed over cells of equal weight along the covariate, Σwr/√Σw in each, which
-    are independent N(0, σ²) when nothing is left over; their orthonormal wave coefficients v are
-    then N(0, σ²) (or less where the fit has already taken part of a wave), and Σv²/σ² over the
-    bands K..1.5K, 1.5K..2.25K, ... is held against chi-square.
+    What the kept functions (unshrunk) could take is taken off the residuals. These are summed over
+    cells of equal weight along the covariate, Σwr/√Σw in each, which are independent N(0, σ²) when
+    nothing is left over; their orthonormal wave coefficients v are then N(0, σ²), or less where
+    kept functions overlap a wave, and Σv²/σ² over the bands ..K/1.5..K..1.5K.. is held against
+    chi-square. On uneven points the kept functions cannot make even some waves slower than K where
+    the data are dense, so slow bands are looked at too.
     """
     t = space.scaled(x)
+    residuals = residuals - _could_take(space, x, residuals, weights)
     cells = min(space.distinct, CELLS)
     order = np.argsort(t, kind="stable")
     heaviness = weights[order]
@@ -85,9 +90,25 @@ def left_over(
     edges = [space.size]
     while edges[-1] < len(squares):
         edges.append(int(np.ceil(GROWTH * edges[-1])))
+    while edges[0] > SLOWEST:
+        edges.insert(0, int(edges[0] / GROWTH))
     bands = list(pairwise(edges))
     for start, stop in bands:
         band = squares[start:stop]
         if len(band) and scipy.special.chdtrc(len(band), band.sum()) < LEVEL / len(bands):
-            return stop
+            return max(stop, int(np.ceil(GROWTH * space.size)))
     return None
+
+
+def _could_take(
+    space: Penalised, x: FloatArray, residuals: FloatArray, weights: FloatArray
+) -> FloatArray:
+    """The weighted projection of the residuals on the constant and the space's own columns."""
+    columns = [np.ones((len(x), 1)), space.unpenalised(x), space.penalised(x)]
+    rooted = np.concatenate(columns, axis=1) * np.sqrt(weights)[:, None]
+    gram = rooted.T @ rooted
+    size = np.sqrt(np.maximum(np.diag(gram), np.finfo(float).tiny))
+    right = rooted.T @ (np.sqrt(weights) * residuals) / size
+    taken = np.linalg.lstsq(gram / np.outer(size, size), right, rcond=1e-10)[0] / size
+    projection: FloatArray = rooted @ taken / np.sqrt(weights)
+    return projection

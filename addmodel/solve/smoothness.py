@@ -26,6 +26,8 @@ EXACTLY = 1e-9
 """Largest gradient at the optimum, as a part of the cost."""
 ROUGHLY = 1e-5
 """The same while starts are compared."""
+CHEAP = 200
+"""So many functions at most make a start cost little."""
 COMMON = (3.0, 8.0, 20.0)
 """Effective degrees of freedom of a block at common starts."""
 MODALLY = 1e-8
@@ -216,6 +218,8 @@ def quick_look(
     own, rough = given.copy(), given.copy()
     common = [given.copy() for _ in COMMON]
     counts = list(problem.sizes)
+    # More starts where optima are many, or where they cost little.
+    many = criterion.rough_optima or len(problem.pull) <= CHEAP
     diagonal = np.maximum(np.diag(problem.schur), np.finfo(float).tiny)
     for j in free.tolist():
         place, size = problem.slices[j], problem.sizes[j]
@@ -226,15 +230,15 @@ def quick_look(
         left = np.maximum(left, max(1e-3 * problem.base, np.finfo(float).tiny))
         cost = (problem.n - problem.p) * np.log(left) + np.log1p(d / lam[:, None]).sum(axis=1)
         own[j] = lam[cost.argmin()]
-        if criterion.rough_optima:
+        if many:
             for start, lam_j in zip(common, ridges_for(problem, j, COMMON), strict=True):
                 start[j] = lam_j
-        else:
+        if not criterion.rough_optima:
             used = np.flatnonzero(d > 1e-3 * own[j])
             counts[j] = min(size, max(20, int(used.max(initial=0)) + 1))
         rough[j] = half_shrunk(d, 0.6 * counts[j])
     smaller = sum(counts) < 0.7 * sum(problem.sizes)
-    begin = [own, rough, *common] if criterion.rough_optima else [own, rough]
+    begin = [own, rough, *common] if many else [own, rough]
     return (problem.leading(counts) if smaller else problem), begin
 
 

@@ -101,8 +101,11 @@ class Penalised(Space):
         return allowed if self.cap is None else min(self.cap, allowed)
 
     def keep(self, size: int) -> Self:
-        """The same space with its first `size` functions."""
-        return replace(self, size_kept=min(size, len(self.gamma), self.most))
+        """The same space with its first `size` functions; pairs of one roughness stay whole."""
+        size = min(size, len(self.gamma), self.most)
+        if 1 < size < len(self.gamma) and self.gamma[size] < (1 + 1e-6) * self.gamma[size - 1]:
+            size -= 1
+        return replace(self, size_kept=size)
 
     @abstractmethod
     def scaled(self, x: npt.NDArray[Any]) -> FloatArray:
@@ -112,9 +115,8 @@ class Penalised(Space):
     def waves(self, cells: FloatArray) -> FloatArray:
         """Orthonormal wave coefficients of cell values, slow waves first, the constant left out.
 
-        A cheap stand-in for the functions beyond those kept: over equal cells of the data's weight
-        the Demmler–Reinsch functions oscillate like cosines (`curve`) or sine–cosine pairs
-        (`cycle`), the k-th with about k half waves.
+        A cheap stand-in for the functions beyond those kept: cosines (`curve`) or sine–cosine pairs
+        (`cycle`) over equal cells of the data's weight, the k-th with about k half waves.
         """
 
     def penalised(self, x: npt.NDArray[Any]) -> FloatArray:

@@ -45,7 +45,9 @@ class Cycle(Penalised):
     ) -> Cycle:
         """Lay the space on the data; arguments as for `Curve.lay`."""
         points, omega = support(phase(x, period), weights)
-        size = min(size + size % 2, len(points) - 1)  # waves come in pairs: keep them together
+        # Waves come in pairs: keep them together.
+        size = max(2, size - size % 2) if cap is not None else size + size % 2
+        size = min(size, len(points) - 1)
         turn = np.append(points, points[0] + 1.0)
         knots = choose_knots(turn, np.append(omega, omega[0]), max(96, int(1.6 * size)))
         r = len(knots)
