@@ -65,7 +65,7 @@ def linear(
 def coefficients_table(estimate: Estimate, level: float = 0.95) -> pd.DataFrame:
     """Unpenalised coefficients as reported: estimate, std_error, lower, upper, p.
 
-    The straight part of a curve has no p: a test of it alone would say nothing of the curve.
+    The p of a curve's straight part tests that part alone, not the curve.
     """
     design = estimate.design
     p = design.p
@@ -78,9 +78,6 @@ def coefficients_table(estimate: Estimate, level: float = 0.95) -> pd.DataFrame:
     null = scipy.stats.norm() if estimate.outcome.scale_known else scipy.stats.t(left)
     with np.errstate(divide="ignore", invalid="ignore"):
         p_value = 2 * null.sf(np.abs(value / error))
-    for component, place in zip(design.components, design.unpenalised_places, strict=True):
-        if component.block_sizes:
-            p_value[place] = np.nan
     return pd.DataFrame(
         {
             "estimate": value,

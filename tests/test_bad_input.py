@@ -310,7 +310,8 @@ def test_every_error_is_one_of_ours():
 def test_an_unseen_level_as_base_or_average(fit):
     base = fit.predict(NEW_LEVEL, unseen="base")
     assert base[1] == pytest.approx(fit.predict(NEW_LEVEL.assign(site="south"))[1], rel=1e-12)
-    average = fit.predict(NEW_LEVEL, unseen="average")
+    with pytest.warns(Caution, match="at the average of the levels, with intervals as wide"):
+        average = fit.predict(NEW_LEVEL, unseen="average")
     shares = DATA["site"].value_counts(normalize=True)
     each = [fit.predict(NEW_LEVEL.assign(site=level))[1] for level in shares.index]
     assert average[1] == pytest.approx(float(shares.to_numpy() @ each), rel=1e-12)

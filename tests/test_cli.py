@@ -172,7 +172,10 @@ def test_predict_to_csv(fitted, here, data, tmp_path):
     target = tmp_path / "deeper" / "p.csv"
     result = run("predict", out / "fit.addmodel", data, "--out", target)
     assert result.exit_code == 0
-    assert result.stdout == f"120 predictions written to {target}\n"
+    assert result.stdout == (
+        f"120 predictions written to {target}, with 95 % intervals for the mean "
+        "(--new-observation: for a single value).\n"
+    )
     read = pd.read_csv(target)
     assert list(read.columns) == COLUMNS
     pd.testing.assert_frame_equal(read, here.predict(data, interval=0.95), rtol=1e-12)
@@ -191,8 +194,12 @@ def test_predict_to_parquet_with_every_option(fitted, here, tmp_path):
         *("--interval", 0.5, "--new-observation", "--scale", "link", "--unseen", "average"),
     )
     assert result.exit_code == 0
-    assert result.stderr.startswith("Caution: 1 of 5 rows lack a covariate")
-    with pytest.warns(am.Caution, match="1 of 5 rows lack a covariate"):
+    assert "Caution: 1 of 5 rows lack a covariate" in result.stderr
+    assert "Caution: 2 rows have a level of site that the fit has not seen" in result.stderr
+    with (
+        pytest.warns(am.Caution, match="1 of 5 rows lack a covariate"),
+        pytest.warns(am.Caution, match="2 rows have a level of site"),
+    ):
         expected = here.predict(
             new, interval=0.5, new_observation=True, scale="link", unseen="average"
         )

@@ -112,11 +112,13 @@ def test_an_offset_is_a_known_part(data):
     with_it = am.fit(FORMULA, data, offset="o")
     moved = am.fit(FORMULA, data.assign(y=data.y - data.o))
     close(with_it.fitted, moved.fitted + data.o)
-    close(with_it.predict(data), moved.fitted)  # as documented, it is not added
+    close(with_it.predict(data), with_it.fitted)  # looked up in the new rows
     close(with_it.scale, moved.scale)
     close(with_it.criterion_value, moved.criterion_value)
     by_value = am.fit(FORMULA, data, offset=data.o.to_numpy())
     assert np.array_equal(by_value.fitted, with_it.fitted)
+    with pytest.warns(am.Caution, match="predictions are at offset 0"):
+        close(by_value.predict(data), moved.fitted)
 
 
 @pytest.mark.parametrize("role", ["weights", "counts"])
