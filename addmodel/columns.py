@@ -84,7 +84,7 @@ def covariates(model: Model) -> Iterator[tuple[str, Factor, Expression]]:
 
 
 class Role(NamedTuple):
-    """What weights=, counts= or offset= is computed from; reads like an expression."""
+    """What weights=, offset= and the like are computed from; reads like an expression."""
 
     text: str
     names: tuple[str, ...]
@@ -131,14 +131,12 @@ class Raw:
             )
         return result
 
-    def numbers(
-        self, part: Expression | Role, rows: IntArray, rule: str = "must be numbers, not {}."
-    ) -> FloatArray:
-        """Values that have to be numbers; `rule` says so, with a place for what they are."""
+    def numbers(self, part: Expression | Role, rows: IntArray) -> FloatArray:
+        """Values that have to be numbers."""
         values = self.values(part, rows)
         kind = plain_kind(values)
         if kind != "number":
-            raise DataError(f"{part.text} {rule.format(kind)}{text_hint(values)}")
+            raise DataError(f"{part.text} must be numbers, not {kind}.{text_hint(values)}")
         return values.to_numpy(dtype=np.float64)
 
 
@@ -178,10 +176,7 @@ def _column(name: str, values: Series, as_levels: bool) -> Column:
     if not as_levels and (kind == "number" or kind == "date"):
         column = Column(name, kind, frozen(_measured(values)))
     else:
-        codes, labels = level_codes(values)
-        twice = sorted({label for label in labels if labels.count(label) > 1})
-        if twice:
-            raise DataError(f"{name}: several categories have the label '{twice[0]}'.")
+        codes, labels = distinct_levels(name, values)
         column = Column(name, "levels", frozen(codes), labels)
     if column.values.min() == column.values.max():
         raise DataError(
@@ -237,22 +232,39 @@ def _measured(values: Series) -> FloatArray:
     return np.asarray(days + rest / day, dtype=np.float64)
 
 
+def distinct_levels(name: str, values: Series) -> tuple[IntArray, tuple[str, ...]]:
+    """`level_codes`, where every level must have a label of its own.
+
+    Raises
+    ------
+    DataError
+        If two categories, such as 1 and "1", share a label.
+    """
+    codes, labels = level_codes(values)
+    twice = sorted({label for label in labels if labels.count(label) > 1})
+    if twice:
+        raise DataError(f"{name}: several categories have the label '{twice[0]}'.")
+    return codes, labels
+
+
 def level_codes(values: Series) -> tuple[IntArray, tuple[str, ...]]:
     """Codes (n,) and the labels of the levels that occur, in order."""
     kind = plain_kind(values)
     if kind == "category":
         values = values.cat.remove_unused_categories()
         codes = np.asarray(values.cat.codes, dtype=np.int64)
-        return codes, tuple(_label(level) for level in values.cat.categories)
+        return codes, tuple(level_label(level) for level in values.cat.categories)
     codes, distinct = pd.factorize(values)
     # an array keeps the width of its numbers, an index does not: 0.1 as float32 is "0.1"
-    labels = [_label(level) for level in (distinct if kind == "date" else np.asarray(distinct))]
+    labels = [
+        level_label(level) for level in (distinct if kind == "date" else np.asarray(distinct))
+    ]
     order = _natural_order(labels) if kind == "text" else np.argsort(np.asarray(distinct))
     ranks = np.argsort(order).astype(np.int64)
     return ranks[codes], tuple(labels[i] for i in order)
 
 
-def _label(level: Any) -> str:
+def level_label(level: Any) -> str:
     """A level's label: 1 and 1.0 are "1", midnight is left away from dates."""
     if isinstance(level, pd.Timestamp):
         return level.tz_localize(None).isoformat(sep=" ").removesuffix(" 00:00:00")

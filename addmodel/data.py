@@ -6,14 +6,12 @@ kind, so that nothing later has to ask. Messages name rows by their position, co
 
 from __future__ import annotations
 
-from collections.abc import Iterator, Mapping
+from collections.abc import Mapping
 from dataclasses import dataclass
-from operator import itemgetter
 from types import MappingProxyType
 from typing import NoReturn
 
 import numpy as np
-import pandas as pd
 
 from addmodel.columns import (
     Column,
@@ -30,10 +28,11 @@ from addmodel.columns import (
     new_column,
 )
 from addmodel.errors import DataError, FormulaError, nearest
-from addmodel.expression import Expression, parse_expression
+from addmodel.expression import Expression
 from addmodel.formula import Model
 from addmodel.frames import BoolArray, Index, Source, as_series, open_source
-from addmodel.responses import Response, yes_no
+from addmodel.responses import measured, yes_no
+from addmodel.roles import offsets, order_cautions, role_at_fit, role_in_new_rows, weights_of
 
 
 @dataclass(frozen=True, eq=False)
@@ -53,8 +52,8 @@ class Table:
     rows : ndarray of int64
         Positions of the kept rows in the data as read.
     n_read, n_missing, n_weightless : int
-        Rows read, dropped for missing values, and left out for a weight or count of zero (whatever
-        else such a row holds or lacks): n_read = n + n_missing + n_weightless.
+        Rows read, dropped for missing values, and left out for a weight, count or trials of zero
+        (whatever else such a row holds or lacks): n_read = n + n_missing + n_weightless.
     cautions : tuple of str
         What the reader should know about the data.
     trials : ndarray of float64
@@ -97,7 +96,7 @@ class NewRows:
     missing : ndarray of bool, shape (n,)
         Rows in which something needed is missing.
     offset : ndarray of float64, shape (n,)
-        The offset and the logarithm of the exposure; NaN where missing.
+        The offset plus the logarithm of the exposure; NaN where one of these is missing.
     """
 
     columns: Mapping[str, Column]
@@ -167,13 +166,13 @@ def read(
         "trials": trials,
     }
     given = {role: values for role, values in given.items() if values is not None}
-    roles = {role: _role(role, values, source) for role, values in given.items()}
+    roles = {role: role_at_fit(role, values, source) for role, values in given.items()}
     raw = _load(model, source, given, roles)
     n = len(raw.index)
 
-    weight = _weights(roles.get("weights"), raw, whole=False)
-    count = _weights(roles.get("counts"), raw, whole=True)
-    number = _weights(roles.get("trials"), raw, whole=True)
+    weight = weights_of(roles.get("weights"), raw, whole=False)
+    count = weights_of(roles.get("counts"), raw, whole=True)
+    number = weights_of(roles.get("trials"), raw, whole=True)
     weightless = (weight == 0.0) | (count == 0.0) | (number == 0.0)
     incomplete = raw.incomplete(raw.columns) & ~weightless
     if missing == "error" and incomplete.any():
@@ -183,19 +182,17 @@ def read(
         _refuse_empty(raw, weightless, incomplete)
 
     if binary:
-        response = yes_no(model.outcome, roles.get("trials"), event, raw, rows)
+        trials_of_rows = number[rows] if "trials" in roles else None
+        response = yes_no(model.outcome, trials_of_rows, event, raw, rows)
     else:
-        rule = "is {}; it must be a number for this outcome (yes/no: outcome='binomial')."
-        plain = raw.numbers(model.outcome, rows, rule)
-        response = Response(plain, np.ones(rows.size), None)
+        response = measured(model.outcome, raw, rows)
     columns = fitted_columns(model, raw, rows)
-    offsets = _offsets(roles, raw, rows)
     return Table(
         outcome_name=model.outcome.text,
-        outcome=frozen(response.proportion),
+        outcome=frozen(response.values),
         weights=frozen(weight[rows]),
         counts=frozen(count[rows]),
-        offset=frozen(offsets),
+        offset=frozen(offsets(roles, raw, rows)),
         columns=columns,
         index=raw.index[rows],
         rows=frozen(rows),
@@ -203,7 +200,7 @@ def read(
         n_missing=int(incomplete.sum()),
         n_weightless=int(weightless.sum()),
         cautions=(
-            *_order_cautions(given, raw.index),
+            *order_cautions(given, raw.index),
             *response.cautions,
             *column_cautions(model, columns),
         ),
@@ -243,11 +240,12 @@ def read_new(
     Raises
     ------
     DataError
-        If a column is not there, is of another type than at the fit, or has infinite values.
+        If a column is not there, is of another type than at the fit, or has infinite values; if an
+        exposure is not positive.
     """
     _check_choice("missing", missing, ("keep", "error"))
     source = open_source(data)
-    parts = {role: _role_of_fit(role, text, source) for role, text in roles.items()}
+    parts = {role: role_in_new_rows(text, role, source) for role, text in roles.items()}
     used = [expressions[key].names for key in columns] + [part.names for part in parts.values()]
     needed = list(dict.fromkeys(name for names in used for name in names))
     for name in needed:
@@ -265,54 +263,9 @@ def read_new(
         if found:
             unseen[key] = found
     offset = np.full(len(raw.index), np.nan)
-    whole = np.flatnonzero(~gaps)
-    offset[whole] = _offsets(parts, raw, whole)
+    known = np.flatnonzero(~raw.incomplete(name for part in parts.values() for name in part.names))
+    offset[known] = offsets(parts, raw, known)
     return NewRows(coded, raw.index, len(raw.index), unseen, frozen(gaps), frozen(offset))
-
-
-# Weights, counts and offset
-
-
-def _role(role: str, given: object, source: Source) -> Role:
-    """What weights=, counts= or offset= is computed from."""
-    if not isinstance(given, str):
-        return Role(f"{role}=", (f"{role}=",), itemgetter(f"{role}="))
-    text = f"{role}= ({given})"
-    if given in source.names:  # also names that are no expression, as "my weights"
-        return Role(text, (given,), itemgetter(given))
-    expression = parse_expression(given, role)
-    for name in expression.names:
-        if name not in source.names:
-            raise DataError(
-                f"{role}={given!r}: {source.what} has no column '{name}'. "
-                f"{nearest(name, map(str, source.names))}"
-            )
-    return Role(text, expression.names, expression.evaluate)
-
-
-def _role_of_fit(role: str, text: str, source: Source) -> Role:
-    """What a role was computed from at the fit, to be found in new rows."""
-    if text in source.names:
-        return Role(f"{role}= ({text})", (text,), itemgetter(text))
-    expression = parse_expression(text, role)
-    return Role(f"{role}= ({text})", expression.names, expression.evaluate)
-
-
-def _offsets(roles: Mapping[str, Role], raw: Raw, rows: IntArray) -> FloatArray:
-    """The offset and the logarithm of the exposure at complete rows, (n,)."""
-    total = np.zeros(rows.size)
-    if "offset" in roles:
-        total = total + raw.numbers(roles["offset"], rows)
-    if "exposure" in roles:
-        exposure = raw.numbers(roles["exposure"], rows)
-        if (exposure <= 0).any():
-            broken = rows[exposure <= 0]
-            raise DataError(
-                f"{roles['exposure'].text} must be positive: {exposure[exposure <= 0][0]:g} in "
-                f"{listed(broken)}."
-            )
-        total = total + np.log(exposure)
-    return total
 
 
 def _load(
@@ -331,25 +284,6 @@ def _load(
             )
         columns[f"{role}="] = values
     return Raw.of(columns, index)
-
-
-def _weights(part: Role | None, raw: Raw, *, whole: bool) -> FloatArray:
-    """Weights or counts of all rows; 1 where missing or not given."""
-    full = np.ones(len(raw.index))
-    rows = np.flatnonzero(~raw.incomplete(part.names)) if part else np.empty(0, np.int64)
-    if part is None or rows.size == 0:
-        return full
-    full[rows] = values = raw.numbers(part, rows)
-    rules = [(values < 0.0, "must not be negative")]
-    if whole:
-        rules.append((values != np.floor(values), "must be whole numbers"))
-    for broken, rule in rules:
-        if broken.any():
-            shown = ", ".join(f"{v:g}" for v in values[broken][:5])
-            raise DataError(f"{part.text} {rule}: {shown} in {listed(rows[broken])}.")
-    if not values.any():
-        raise DataError(f"{part.text} is zero in every row; there is nothing to fit.")
-    return full
 
 
 # Checks
@@ -400,7 +334,7 @@ def _refuse_empty(raw: Raw, weightless: BoolArray, incomplete: BoolArray) -> NoR
     if incomplete.any():
         reasons.append(f"{incomplete.sum()} have missing values, in {_gaps(raw, incomplete)}")
     if weightless.any():
-        reasons.append(f"{weightless.sum()} have a weight or count of zero")
+        reasons.append(f"{weightless.sum()} have a weight, count or trials of zero")
     raise DataError(f"no row is left of {len(weightless)}: {'; '.join(reasons)}.")
 
 
@@ -408,16 +342,3 @@ def _gaps(raw: Raw, incomplete: BoolArray) -> str:
     """The columns with missing values in these rows, and how many each has."""
     numbers = {name: int((missing & incomplete).sum()) for name, missing in raw.missing.items()}
     return ", ".join(f"{name} ({number})" for name, number in numbers.items() if number)
-
-
-def _order_cautions(given: Mapping[str, object], index: Index) -> Iterator[str]:
-    for role, values in given.items():
-        if (
-            isinstance(values, pd.Series)
-            and not values.index.equals(index)
-            and len(values.index.symmetric_difference(index, sort=False)) == 0
-        ):
-            yield (
-                f"{role}= has the index of the data in another order; its values were taken by "
-                "position, not by label."
-            )

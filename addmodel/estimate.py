@@ -7,11 +7,10 @@ parameters, ask whether the detail was enough, and go again with more where it w
 from __future__ import annotations
 
 from collections.abc import Callable
-from dataclasses import dataclass, replace
+from dataclasses import dataclass
 from functools import cache
 
 import numpy as np
-import scipy.optimize
 from threadpoolctl import ThreadpoolController
 
 from addmodel import cautions
@@ -19,20 +18,16 @@ from addmodel.component import Design
 from addmodel.data import Table
 from addmodel.errors import ModelError
 from addmodel.formula import Model
+from addmodel.laid import Laid, null_predictor, quasi_scale, row_weights, with_best_dispersion
 from addmodel.outcomes import Outcome
 from addmodel.outcomes.likelihood import Likelihood
-from addmodel.rows.dense import DenseRows
 from addmodel.solve.criteria import Criterion
 from addmodel.solve.detail import CEILING, SHRUNK, wanted
-from addmodel.solve.pirls import Modes
-from addmodel.solve.quadratic import Point
-from addmodel.solve.smoothness import Smoothness, choose, choose_mode, polish
+from addmodel.solve.smoothness import Smoothness
 from addmodel.solve.uncertainty import smoothing_spread
 from addmodel.spaces.base import FloatArray, Penalised
 
 ROUNDS = 16
-DIGITS = 1e-5
-"""When so little of the starting deviance is left, it is summed again about the solution."""
 Progress = Callable[[str], None]
 
 
@@ -129,9 +124,12 @@ def estimate(
     FormulaError, ModelError
         Where the model has no meaning on these data.
     """
+    _check_outcome(table, outcome)
+    outcome.check(table)
     # At a few hundred columns two BLAS threads are slower than one, most of all on a busy machine.
     with _threads().limit(limits=1, user_api="blas"):
-        return _estimate(model, table, outcome, criterion, arguments, progress)
+        found = _search(model, table, outcome, criterion, progress)
+        return _estimate(model, table, criterion, arguments, found)
 
 
 @cache
@@ -139,55 +137,68 @@ def _threads() -> ThreadpoolController:
     return ThreadpoolController()
 
 
-def _estimate(
-    model: Model,
-    table: Table,
-    outcome: Outcome,
-    criterion: Criterion,
-    arguments: dict[str, str],
-    progress: Progress,
-) -> Estimate:
+@dataclass(frozen=True)
+class Found:
+    """Where the search ended."""
+
+    laid: Laid
+    outcome: Outcome
+    smoothness: Smoothness
+    coefficients: FloatArray  # (P,)
+    linear_predictor: FloatArray  # (n,)
+    confirmed: tuple[bool, ...]
+    steps: int
+
+
+def _search(
+    model: Model, table: Table, outcome: Outcome, criterion: Criterion, progress: Progress
+) -> Found:
+    """Lay, choose smoothness, and go again while scale or detail are not what they should be."""
     weights = row_weights(table)
-    _check_outcome(table)
-    outcome.check(table)
-    scale = 1.0
     progress("laying the components on the data")
     design = Design.lay(model, table)
-    confirmed = [False] * len(design.components)
-    steps = 0
-    for turn in range(ROUNDS):
+    scale, steps = 1.0, 0
+    for _ in range(ROUNDS):
         progress(f"choosing smoothness ({sum(design.block_sizes)} functions)")
         laid = Laid.on(design, table, outcome, criterion, scale)
         smoothness = laid.smoothness(criterion)
         if outcome.dispersion_free:
             outcome, smoothness = with_best_dispersion(laid, smoothness, criterion)
         steps += smoothness.steps
-        point = smoothness.point
-        beta = point.coefficients()
+        beta = smoothness.point.coefficients()
         eta = laid.modes.rows.linear_predictor(beta)
-        if outcome.quasi:
-            before, scale = scale, quasi_scale(outcome, table, eta, point)
         curvature = outcome.curvature(table.outcome, eta, weights)
         working = np.maximum(curvature.fisher, 1e-300)
         residuals = curvature.slope / working
         sizes, confirmed = _sizes(
-            design, smoothness, table, residuals, working, criterion.scale(point)
+            design, smoothness, table, residuals, working, criterion.scale(smoothness.point)
         )
-        if outcome.quasi and turn < ROUNDS - 1 and abs(np.log(scale / before)) > 1e-4:
-            continue
-        if turn == ROUNDS - 1 or sizes == _present(design):
+        found = Found(laid, outcome, smoothness, beta, eta, tuple(confirmed), steps)
+        if outcome.quasi:
+            before, scale = scale, quasi_scale(outcome, table, eta, smoothness.point)
+            if abs(np.log(scale / before)) > 1e-4:
+                continue
+        if sizes == [c.spaces[0].size for c in design.components]:
             break
         design = design.resized(sizes, table)
-    scale = criterion.scale(point)
-    likelihood = point.problem.likelihood
-    deviance = laid.modes.rows.deviance(beta, outcome)
-    if outcome.plain:
-        deviance = point.deviance
-    fisher = laid.modes.quadratic(beta, fisher=True, gram=None)
-    flat = fisher.at(point.smoothing)
+    return found
+
+
+def _estimate(
+    model: Model, table: Table, criterion: Criterion, arguments: dict[str, str], found: Found
+) -> Estimate:
+    """What was found, with what the rows alone can tell of it."""
+    laid, outcome, point = found.laid, found.outcome, found.smoothness.point
+    design, rows = laid.design, laid.modes.rows
+    beta, eta, weights = found.coefficients, found.linear_predictor, row_weights(table)
+    scale, likelihood = criterion.scale(point), point.problem.likelihood
+    deviance = point.deviance if outcome.plain else rows.deviance(beta, outcome)
+    fisher = laid.modes.quadratic(beta, fisher=True).at(point.smoothing)
+    gram = fisher.problem.sums.gram
     pearson = outcome.pearson(table.outcome, outcome.mean(eta), weights)
-    dispersion = pearson / max(likelihood.n - flat.effective_df, 1.0)
-    free = [j for j, owner in enumerate(design.block_owners) if _chosen(design, owner)]
+    dispersion = pearson / max(likelihood.n - fisher.effective_df, 1.0)
+    owners = [design.components[j] for j in design.block_owners]
+    free = [j for j, c in enumerate(owners) if c.smoothing is None and c.df is None]
     spread = smoothing_spread(point, criterion, free)
     return Estimate(
         model=model,
@@ -196,11 +207,10 @@ def _estimate(
         criterion=criterion.name,
         coefficients=beta,
         covariance=scale * point.covariance(),
-        column_df=np.einsum("ij,ji->i", flat.covariance(), fisher.sums.gram),
+        column_df=np.einsum("ij,ji->i", fisher.covariance(), gram),
         smoothing_spread=spread,
-        corrected_df=flat.effective_df
-        + float(np.sum(spread * (fisher.sums.gram @ spread))) / scale,
-        shares=_shares(laid, beta, row_weights(table)),
+        corrected_df=fisher.effective_df + float(np.sum(spread * (gram @ spread))) / scale,
+        shares=_shares(laid, beta, weights),
         smoothing=point.smoothing,
         scale=scale,
         dispersion=dispersion,
@@ -212,151 +222,21 @@ def _estimate(
         reading=Reading(
             table.n_read, table.n_missing, table.n_weightless, len(table.rows), table.event
         ),
-        steps=steps,
-        settled=smoothness.settled,
-        gradient=smoothness.gradient,
-        detail_confirmed=tuple(confirmed),
+        steps=found.steps,
+        settled=found.smoothness.settled,
+        gradient=found.smoothness.gradient,
+        detail_confirmed=found.confirmed,
         cautions=(
             *table.cautions,
             *design.notes,
-            *cautions.of_smoothness(design, smoothness),
-            *cautions.of_freedom(likelihood.n, flat.effective_df, "counts" in arguments),
+            *cautions.of_smoothness(design, found.smoothness),
+            *cautions.of_freedom(likelihood.n, fisher.effective_df, "counts" in arguments),
             *cautions.of_outcome(design, table, outcome, eta, dispersion),
         ),
         arguments=arguments,
         table=table,
         linear_predictor=eta,
     )
-
-
-def quasi_scale(outcome: Outcome, table: Table, eta: FloatArray, point: Point) -> float:
-    """Pearson's X²/(n − τ) (Wedderburn 1974; McCullagh & Nelder 1989, ch. 9)."""
-    pearson = outcome.pearson(table.outcome, outcome.mean(eta), row_weights(table))
-    return max(pearson / max(point.problem.n - point.effective_df, 1.0), 1e-300)
-
-
-def with_best_dispersion(
-    laid: Laid, smoothness: Smoothness, criterion: Criterion
-) -> tuple[Outcome, Smoothness]:
-    """The negative binomial's dispersion α at the optimum of the criterion, with its smoothness.
-
-    At given smoothing parameters α minimises the criterion in one variable; α and the smoothing
-    parameters are improved in turn until α stays.
-    """
-    first = laid.modes.outcome
-
-    def at(alpha: float) -> Laid:
-        return laid.with_outcome(first.with_dispersion(alpha))
-
-    found, alpha = smoothness, float(first.family.alpha)
-    for _ in range(12):
-        best = scipy.optimize.minimize_scalar(
-            lambda t, here, mode: criterion.cost(at(float(np.exp(t))).modes.at(here, mode)),
-            args=(found.point.smoothing, found.point.coefficients()),
-            bounds=(np.log(1e-6), np.log(1e3)),
-            method="bounded",
-            options={"xatol": 1e-7},
-        )
-        before, alpha = alpha, float(np.exp(best.x))
-        found = at(alpha).smoothness(criterion)
-        if abs(np.log(alpha / before)) < 1e-6:
-            break
-    return first.with_dispersion(alpha), found
-
-
-@dataclass(frozen=True)
-class Laid:
-    """A design laid on rows: gives the penalised problem about any coefficients."""
-
-    design: Design
-    modes: Modes
-    start: FloatArray  # (P,)
-
-    @classmethod
-    def on(
-        cls, design: Design, table: Table, outcome: Outcome, criterion: Criterion, scale: float
-    ) -> Laid:
-        """The design's columns at the rows of the table; `scale` is φ where it is known."""
-        weights = row_weights(table)
-        values = {key: column.values for key, column in table.columns.items()}
-        columns = design.matrix(values, len(weights))
-        plain = columns[:, : design.p] * np.sqrt(table.counts)[:, None]
-        diagonal = np.diag(np.linalg.qr(plain)[1])
-        start = np.zeros(columns.shape[1])
-        start[0] = null_predictor(table, outcome)
-        modes = Modes(
-            rows=DenseRows(columns, table.outcome, weights, table.offset),
-            outcome=outcome,
-            p=design.p,
-            sizes=design.block_sizes,
-            log_det_design=2 * float(np.log(np.abs(diagonal)).sum()),
-            likelihood=likelihood_of(table, outcome, scale),
-            expected=criterion.name != "reml",
-        )
-        return cls(design, modes, start)
-
-    def with_outcome(self, outcome: Outcome) -> Laid:
-        """The same rows and columns under another outcome."""
-        likelihood = replace(self.modes.likelihood, outcome=outcome)
-        return replace(self, modes=replace(self.modes, outcome=outcome, likelihood=likelihood))
-
-    def smoothness(self, criterion: Criterion) -> Smoothness:
-        """Choose smoothness; from sums taken anew about the solution where digits were lost."""
-        owners = [self.design.components[j] for j in self.design.block_owners]
-        fixed = [c.smoothing for c in owners]
-        degrees = [None if c.df is None else c.df - len(c.own) for c in owners]
-        problem = self.modes.quadratic(self.start, fisher=True)
-        for j, spanned in enumerate(problem.spanned):
-            if spanned and (fixed[j] is not None or degrees[j] is not None):
-                raise ModelError(
-                    f"The bend of {owners[j].name} is wholly in the levels of other terms, so "
-                    "df= and smoothing= have no meaning for it. Leave out one of the terms."
-                )
-            if spanned:
-                fixed[j] = np.inf
-        if not self.modes.outcome.plain:
-            return choose_mode(self.modes, criterion, fixed, degrees, self.start)
-        first = choose(problem, criterion, fixed, degrees)
-        free = np.flatnonzero(
-            [f is None and d is None for f, d in zip(fixed, degrees, strict=True)]
-        )
-        point = first.point
-        if point.penalised_deviance < DIGITS * problem.sums.deviance:
-            gram = problem.sums.gram  # a Gaussian outcome's weights do not change with its mean
-            again = self.modes.quadratic(point.coefficients(), fisher=True, gram=gram)
-            point = again.at(point.smoothing)
-        return polish(first, point, criterion, free)
-
-
-def row_weights(table: Table) -> FloatArray:
-    """Prior weight times count times trials, (n,)."""
-    weights: FloatArray = table.weights * table.counts * table.trials
-    return weights
-
-
-def likelihood_of(table: Table, outcome: Outcome, scale: float) -> Likelihood:
-    """The outcome with the rows' constants; φ is fixed at `scale` unless it is profiled."""
-    fixed = scale if outcome.scale_known or outcome.quasi else None
-    return Likelihood(outcome, table.outcome, table.weights, table.counts, table.trials, fixed)
-
-
-def null_predictor(table: Table, outcome: Outcome) -> float:
-    """The constant linear predictor beside the offset, by Fisher scoring in one coefficient."""
-    weights = row_weights(table)
-    one = DenseRows(np.ones((len(weights), 1)), table.outcome, weights, table.offset)
-    mean = float(np.average(table.outcome, weights=weights))
-    typical = outcome.family.starting_mu(np.array([mean, mean]))[:1]
-    beta = np.asarray(outcome.family.link(typical), dtype=np.float64) - np.average(table.offset)
-    for _ in range(50):
-        sums = one.sweep(beta, outcome, fisher=True)
-        step = sums.score / sums.gram[0]
-        size = 1.0
-        while one.deviance(beta + size * step, outcome) > sums.deviance and size > 1e-9:
-            size /= 2
-        beta = beta + size * step
-        if abs(float(step[0])) < 1e-10 * max(1.0, abs(float(beta[0]))):
-            break
-    return float(beta[0])
 
 
 def _sizes(
@@ -392,15 +272,15 @@ def _sizes(
     return sizes, confirmed
 
 
-def _present(design: Design) -> list[int]:
-    return [c.spaces[0].size for c in design.components]
-
-
-def _check_outcome(table: Table) -> None:
-    if np.ptp(table.outcome - table.offset) == 0:
+def _check_outcome(table: Table, outcome: Outcome) -> None:
+    """Something must be there to explain."""
+    plain = np.ptp(table.outcome - table.offset) == 0 and outcome.plain
+    if plain or (np.ptp(table.outcome) == 0 and np.ptp(table.offset) == 0):
         raise ModelError(
             f"{table.outcome_name} has the same value in all rows used: nothing is left to explain."
         )
+    if outcome.kind in ("Poisson", "NegativeBinomial", "Tweedie") and not table.outcome.any():
+        raise ModelError(f"{table.outcome_name} is zero in all rows used: there are no events.")
 
 
 def _null_deviance(table: Table, outcome: Outcome) -> float:
@@ -414,11 +294,6 @@ def _log_likelihood(likelihood: Likelihood, deviance: float, scale: float) -> fl
     if likelihood.outcome.kind == "Gaussian":
         scale = deviance / likelihood.n
     return likelihood.log_likelihood(deviance, scale) if scale > 0 else np.inf
-
-
-def _chosen(design: Design, owner: int) -> bool:
-    component = design.components[owner]
-    return component.smoothing is None and component.df is None
 
 
 def _shares(laid: Laid, beta: FloatArray, weights: FloatArray) -> FloatArray:

@@ -1,4 +1,4 @@
-"""A yes/no outcome as it was read -> proportions of events: 0/1, two levels, events of trials."""
+"""The outcome as it was read -> numbers, or proportions of events (0/1, levels, of trials)."""
 
 from __future__ import annotations
 
@@ -6,26 +6,51 @@ from typing import NamedTuple
 
 import numpy as np
 
-from addmodel.columns import FloatArray, IntArray, Raw, Role, level_codes, listed
+from addmodel.columns import (
+    FloatArray,
+    IntArray,
+    Raw,
+    distinct_levels,
+    level_label,
+    listed,
+)
 from addmodel.errors import DataError, nearest
 from addmodel.expression import Expression
-from addmodel.frames import plain_kind
+from addmodel.frames import plain_kind, text_hint
 
 
 class Response(NamedTuple):
-    """A yes/no outcome."""
+    """An outcome at the rows used."""
 
-    proportion: FloatArray  # (n,) events/trials
+    values: FloatArray  # (n,) numbers, or events/trials
     trials: FloatArray  # (n,)
     event: str | None
     """The level that is counted, where the rows are single trials."""
     cautions: tuple[str, ...] = ()
 
 
+def measured(outcome: Expression, raw: Raw, rows: IntArray) -> Response:
+    """An outcome of numbers at these complete rows.
+
+    Raises
+    ------
+    DataError
+        If it is anything else.
+    """
+    values = raw.values(outcome, rows)
+    kind = plain_kind(values)
+    if kind != "number":
+        raise DataError(
+            f"{outcome.text} is {kind}; it must be a number for this outcome (yes/no: "
+            f"outcome='binomial').{text_hint(values)}"
+        )
+    return Response(values.to_numpy(dtype=np.float64), np.ones(rows.size), None)
+
+
 def yes_no(
-    outcome: Expression, trials: Role | None, event: object, raw: Raw, rows: IntArray
+    outcome: Expression, trials: FloatArray | None, event: object, raw: Raw, rows: IntArray
 ) -> Response:
-    """The outcome of these complete rows.
+    """A yes/no outcome at these complete rows, each of `trials` (whole, at least 1) or of one.
 
     Raises
     ------
@@ -36,14 +61,7 @@ def yes_no(
         return _single(outcome, event, raw, rows)
     if event is not None:
         raise DataError("event= names a level of single yes/no rows; it has no use beside trials=.")
-    number = raw.numbers(trials, rows)
-    broken = (number < 1) | (number != np.floor(number))
-    if broken.any():
-        raise DataError(
-            f"{trials.text} must be whole numbers of at least 1: "
-            f"{number[broken][0]:g} in {listed(rows[broken])}."
-        )
-    return _of_trials(outcome, raw.numbers(outcome, rows), number, rows)
+    return _of_trials(outcome, raw.numbers(outcome, rows), trials, rows)
 
 
 def _of_trials(outcome: Expression, y: FloatArray, trials: FloatArray, rows: IntArray) -> Response:
@@ -74,7 +92,7 @@ def _of_trials(outcome: Expression, y: FloatArray, trials: FloatArray, rows: Int
 def _single(outcome: Expression, event: object, raw: Raw, rows: IntArray) -> Response:
     """Rows of one trial each: 0/1, yes/no, or two levels."""
     values = raw.values(outcome, rows)
-    codes, labels = level_codes(values)
+    codes, labels = distinct_levels(outcome.text, values)
     kind = plain_kind(values)
     ones = np.ones(len(rows))
     if len(labels) == 1:
@@ -94,18 +112,24 @@ def _single(outcome: Expression, event: object, raw: Raw, rows: IntArray) -> Res
                 f"event={labels[1]} to count that one."
             )
     if len(labels) > 2:
-        shown = ", ".join(f"'{label}'" for label in labels[:5])
+        shown = ", ".join(f"'{label}'" for label in labels[:5]) + (
+            ", ..." if len(labels) > 5 else ""
+        )
         raise DataError(
-            f"{outcome.text} has {len(labels)} different values ({shown}, ...) and a binomial "
+            f"{outcome.text} has {len(labels)} different values ({shown}) and a binomial "
             "outcome has two. For counts of events give trials=."
         )
-    if event is None:
-        counted = 1
-    else:
-        wanted = f"{event:g}" if type(event) in (int, float) else str(event)
-        if wanted not in labels:
-            raise DataError(
-                f"event={event!r} is not a level of {outcome.text}. {nearest(wanted, labels)}"
-            )
-        counted = labels.index(wanted)
+    counted = 1 if event is None else _place(outcome, event, labels)
     return Response((codes == counted).astype(np.float64), ones, labels[counted])
+
+
+def _place(outcome: Expression, event: object, labels: tuple[str, ...]) -> int:
+    """The level that event= names: by its label, and 0/1 stand for False/True and back."""
+    wanted = level_label(event)
+    if wanted not in labels:
+        same = {"0": "False", "1": "True", "False": "0", "True": "1"}.get(wanted)
+        if same not in labels or set(labels) not in ({"0", "1"}, {"False", "True"}):
+            known = nearest(wanted, labels)
+            raise DataError(f"event={event!r} is not a level of {outcome.text}. {known}")
+        wanted = same
+    return labels.index(wanted)

@@ -6,8 +6,8 @@ import numpy as np
 
 from addmodel.component import Design
 from addmodel.data import read
-from addmodel.estimate import Laid
 from addmodel.formula import parse
+from addmodel.laid import Laid
 from addmodel.outcomes import outcome_for
 from addmodel.solve.criteria import CRITERIA
 from addmodel.solve.quadratic import Problem

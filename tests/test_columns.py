@@ -187,7 +187,8 @@ def test_curves_need_numbers(term: str) -> None:
 )
 def test_outcome_must_be_a_number(column: Any, kind: str) -> None:
     message = refusal("y ~ x", {"y": column, "x": [1, 2, 4]})
-    assert f"y is {kind}; it must be a number for this outcome (yes/no: outcome='binomial')." in message
+    rule = "it must be a number for this outcome (yes/no: outcome='binomial')."
+    assert f"y is {kind}; {rule}" in message
 
 
 def test_a_transform_of_text() -> None:

@@ -9,8 +9,8 @@ from statsmodels.genmod import families
 import addmodel as am
 from addmodel.component import Design
 from addmodel.data import read
-from addmodel.estimate import Laid
 from addmodel.formula import parse
+from addmodel.laid import Laid
 from addmodel.outcomes import outcome_for
 from addmodel.solve.criteria import CRITERIA
 from tests.models import DATA
