@@ -240,7 +240,7 @@ FIT_ERRORS = {
     "fractions": (["y ~ x", "--counts", "w"], "must be whole numbers"),
     "criterion": (["y ~ x", "--criterion", "aic"], "(?s)Invalid value for '--criterion'.*'reml'"),
     "missing": (["y ~ x", "--missing", "skip"], "(?s)Invalid value for '--missing'.*'drop'"),
-    "unknown option": (["y ~ x", "--wights", "w"], "No such option: --wights.*--weights"),
+    "unknown option": (["y ~ x", "--wights", "w"], "No such option.*--wights.*--weights"),
 }
 
 

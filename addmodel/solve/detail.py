@@ -10,6 +10,7 @@ from __future__ import annotations
 from itertools import pairwise
 
 import numpy as np
+import scipy.linalg
 import scipy.special
 
 from addmodel.spaces.base import FloatArray, Penalised
@@ -109,6 +110,8 @@ def _could_take(
     gram = rooted.T @ rooted
     size = np.sqrt(np.maximum(np.diag(gram), np.finfo(float).tiny))
     right = rooted.T @ (np.sqrt(weights) * residuals) / size
-    taken = np.linalg.lstsq(gram / np.outer(size, size), right, rcond=1e-10)[0] / size
+    unit = gram / np.outer(size, size)
+    unit[np.diag_indices_from(unit)] += 1e-9  # columns may repeat each other under other weights
+    taken = scipy.linalg.solve(unit, right, assume_a="pos", check_finite=False) / size
     projection: FloatArray = rooted @ taken / np.sqrt(weights)
     return projection
