@@ -52,7 +52,9 @@ def _marked(formula: str, span: tuple[int, int] | None) -> str:
 def nearest(name: str, known: Iterable[str]) -> str:
     """A hint naming the known names closest to a misspelt one, or what there is."""
     known = [str(k) for k in known]
-    close = difflib.get_close_matches(str(name), known, n=2, cutoff=0.6)
+    folded = {k.casefold(): k for k in known}
+    close = difflib.get_close_matches(str(name).casefold(), folded, n=2, cutoff=0.6)
+    close = [folded[c] for c in close]
     if close:
         return "Did you mean " + " or ".join(f"'{c}'" for c in close) + "?"
     shown = ", ".join(f"'{k}'" for k in known[:12])
