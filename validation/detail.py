@@ -1,7 +1,7 @@
 """Automatic detail against all functions, and fast waves in noise.
 
-Ten random models of one curve (tests/test_detail.py): the largest difference between the fit with
-automatic detail and the fit with all functions, in pointwise standard errors. Then a sine whose
+Ten random models of one to three curves (tests/test_detail.py): the largest difference between the fit
+with automatic detail and the fit with all functions, in pointwise standard errors. Then a sine whose
 amplitude is the noise's standard deviation, 20 samples each: found means that the fitted curve has
 a correlation above 0.9 with it, by a fit that was given nothing but `y ~ curve(x)`.
 """
@@ -9,23 +9,21 @@ a correlation above 0.9 with it, by a fit that was given nothing but `y ~ curve(
 import numpy as np
 
 import addmodel as am
-from tests.test_detail import random_model, waves_in_noise
+from tests.test_detail import against_all, waves_in_noise
 from validation.results import section
 
 
 def main() -> None:
     rows: list[list[object]] = [["case", "n", "functions kept", "effective df", "result"]]
     for seed in range(10):
-        data = random_model(seed)
-        fit, full = am.fit("y ~ curve(x)", data), am.fit('y ~ curve(x, detail="all")', data)
-        error = full.predict(data, interval=0.95)["std_error"].to_numpy()
-        worst = (np.abs(fit.fitted - full.fitted) / error).max()
-        kept = fit.estimate.design.components[0].spaces[0].size
+        fit, full, difference = against_all(seed)
+        worst = difference.max()
+        components = fit.estimate.design.components
         rows.append(
             [
-                f"random model {seed}",
-                len(data["x"]),
-                kept,
+                f"random model {seed}, curves: {len(components)}",
+                len(difference),
+                ", ".join(str(c.spaces[0].size) for c in components),
                 f"{fit.effective_df:.2f} (all: {full.effective_df:.2f})",
                 f"{100 * worst:.2f} % of a standard error",
             ]

@@ -66,15 +66,23 @@ def left_over(
 ) -> int | None:
     """A larger number of functions, where waves that those kept cannot make stand out of the noise.
 
-    What the kept functions (unshrunk) could take is taken off the residuals. These are summed over
-    cells of equal weight along the covariate, Σwr/√Σw in each, which are independent N(0, σ²) when
-    nothing is left over; their orthonormal wave coefficients v are then N(0, σ²), or less where
-    kept functions overlap a wave, and Σv²/σ² over the bands ..K/1.5..K..1.5K.. is held against
-    chi-square. On uneven points the kept functions cannot make even some waves slower than K where
-    the data are dense, so slow bands are looked at too.
+    The residuals are summed over cells of equal weight along the covariate, Σwr/√Σw in each, which
+    are independent N(0, σ²) when nothing is left over; their orthonormal wave coefficients v are
+    then N(0, σ²), or less where kept functions overlap a wave, and Σv²/σ² over the bands
+    ..K/1.5..K..1.5K.. is held against chi-square. On uneven points the kept functions cannot make
+    even some waves slower than K where the data are dense, so slow bands are looked at too; what
+    the kept functions could take if they were not shrunk is taken off before that counts.
     """
+    if _outstanding(space, x, residuals, weights, scale) is None:
+        return None
+    rest = residuals - _could_take(space, x, residuals, weights)
+    return _outstanding(space, x, rest, weights, scale)
+
+
+def _outstanding(
+    space: Penalised, x: FloatArray, residuals: FloatArray, weights: FloatArray, scale: float
+) -> int | None:
     t = space.scaled(x)
-    residuals = residuals - _could_take(space, x, residuals, weights)
     cells = min(space.distinct, CELLS)
     order = np.argsort(t, kind="stable")
     heaviness = weights[order]
