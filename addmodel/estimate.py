@@ -170,9 +170,12 @@ def _search(
         curvature = outcome.curvature(table.outcome, eta, weights)
         working = np.maximum(curvature.fisher, 1e-300)
         residuals = curvature.slope / working
-        sizes, confirmed = _sizes(
-            design, smoothness, table, residuals, working, criterion.scale(smoothness.point)
+        # An outcome that varies more than it is assumed to must not look like waves left over.
+        noise = max(
+            criterion.scale(smoothness.point),
+            quasi_scale(outcome, table, eta, smoothness.point),
         )
+        sizes, confirmed = _sizes(design, smoothness, table, residuals, working, noise)
         found = Found(laid, outcome, smoothness, beta, eta, tuple(confirmed), steps)
         if outcome.quasi:
             before, scale = scale, quasi_scale(outcome, table, eta, smoothness.point)

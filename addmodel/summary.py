@@ -135,7 +135,7 @@ def outcome_words(estimate: Estimate) -> str:
         spread = np.sqrt(estimate.scale)
         return f"{name} is taken as Gaussian about its mean, with standard deviation {spread:.4g}."
     event = f" (counted: {estimate.reading.event})" if estimate.reading.event else ""
-    about = f"{name}{event} is taken as {outcome.name} about its mean"
+    about = f"{name}{event} is taken as {outcome.name.capitalize()} about its mean"
     if outcome.dispersion_free:
         alpha = float(outcome.family.alpha)
         return f"{about}, with variance μ + {alpha:.3g} μ²."

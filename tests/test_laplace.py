@@ -201,4 +201,3 @@ def test_profiled_scale_is_stationary():
     best = np.log(likelihood.scale(penalised, p))
     assert cost(best) < min(cost(best + 0.01), cost(best - 0.01))
     assert (cost(best + 1e-4) - cost(best - 1e-4)) / 2e-4 == pytest.approx(0, abs=1e-5)
-    assert likelihood.scale_slope(penalised, p) > 0

@@ -99,16 +99,6 @@ class Likelihood:
             high += 1.0
         return float(np.exp(scipy.optimize.brentq(excess, low, high, xtol=1e-13, rtol=1e-14)))
 
-    def scale_slope(self, penalised: float, p: int) -> float:
-        """∂φ/∂D_p, for the criterion's Hessian."""
-        if self.fixed is not None:
-            return 0.0
-        if self.outcome.kind in ("Gaussian", "InverseGaussian"):
-            return 1 / (self.n - p)
-        h = 1e-3
-        up, down = self.scale(penalised * (1 + h), p), self.scale(penalised * (1 - h), p)
-        return (up - down) / (2 * h * penalised)
-
     def log_likelihood(self, deviance: float, scale: float) -> float:
         """ℓ at the fitted mean."""
         return self.saturated(scale) - deviance / (2 * scale)

@@ -18,8 +18,8 @@ from addmodel.spaces.base import FloatArray
 
 Derivatives = tuple[FloatArray, FloatArray, FloatArray, FloatArray]
 """h, h', h'', h''' of the inverse link h at η, each (n,)."""
-FARTHEST = 700.0
-"""exp overflows beyond."""
+FARTHEST = 200.0
+"""On the log scale; the cube of exp overflows a little beyond."""
 
 
 def _identity(eta: FloatArray) -> Derivatives:
@@ -118,9 +118,10 @@ def variance(family: Any, mean: FloatArray) -> tuple[FloatArray, FloatArray, Flo
         return inside * (1 - inside), 1 - 2 * inside, np.full_like(mean, -2.0)
     if kind == "NegativeBinomial":
         alpha = float(family.alpha)
-        inside = np.maximum(mean, 1e-300)
+        inside = np.clip(mean, 1e-100, 1e50)
         return inside + alpha * inside**2, 1 + 2 * alpha * inside, np.full_like(mean, 2 * alpha)
     powers = {"Gaussian": 0.0, "Poisson": 1.0, "Gamma": 2.0, "InverseGaussian": 3.0}
     k = powers[kind] if kind in powers else float(family.var_power)
-    inside = np.maximum(mean, 1e-100)
+    farthest = 10.0 ** (100 / max(k, 1.0))  # the cube of the variance is still a number
+    inside = np.clip(mean, 1 / farthest, farthest)
     return inside**k, k * inside ** (k - 1), k * (k - 1) * inside ** (k - 2)

@@ -49,6 +49,12 @@ LINKS = (
     links.LogC,
 )
 KNOWN_SCALE = ("Binomial", "Poisson", "NegativeBinomial")
+LEAST_WEIGHT = 1e-10
+"""Working weight per prior weight of a count or yes/no row that is all but decided: under
+separation coefficients run off until their rows weigh so little, and stop there."""
+
+MANY = 1e15
+"""numpy draws Poisson counts up to about 1e18."""
 
 
 class Curvature(NamedTuple):
@@ -117,13 +123,16 @@ class Outcome:
     def curvature(self, y: FloatArray, eta: FloatArray, weights: FloatArray) -> Curvature:
         """Slope, observed and Fisher weight at η."""
         mean, h1, h2, _ = inverse_link(self.family.link)(eta)
+        decided = self.kind in KNOWN_SCALE or self.kind == "Tweedie"
+        least = LEAST_WEIGHT * weights if decided else 0.0
         if self.canonical:
-            weight = weights * h1
+            weight = np.maximum(weights * h1, least)
             return Curvature(weights * (y - mean), weight, weight)
         v, v1, _ = variance(self.family, mean)
         a, a1 = h1 / v, h2 / v - h1**2 * v1 / v**2
-        fisher = weights * h1 * a
-        return Curvature(weights * (y - mean) * a, fisher - weights * (y - mean) * a1, fisher)
+        fisher = np.maximum(weights * h1 * a, least)
+        observed = fisher - weights * (y - mean) * a1
+        return Curvature(weights * (y - mean) * a, observed, fisher)
 
     def weight_slopes(
         self, y: FloatArray, eta: FloatArray, weights: FloatArray
@@ -168,17 +177,16 @@ class Outcome:
             return rng.wald(mean, 1 / scale)
         if kind == "Tweedie":
             p = float(self.family.var_power)
-            events = rng.poisson(mean ** (2 - p) / (scale * (2 - p)))
+            events = _poisson(rng, mean ** (2 - p) / (scale * (2 - p)))
             shape = (2 - p) / (p - 1)
             size = scale * (p - 1) * mean ** (p - 1)
             drawn = rng.gamma(np.maximum(events * shape, 1e-12), size)
             return np.where(events > 0, drawn, 0.0)
         if kind == "NegativeBinomial":
             alpha = float(self.family.alpha)
-            return rng.poisson(rng.gamma(1 / alpha, alpha * mean)).astype(np.float64)
+            return _poisson(rng, rng.gamma(1 / alpha, alpha * mean))
         spread = scale - 1
-        rate = rng.gamma(mean / spread, spread) if spread > 1e-9 else mean
-        return rng.poisson(rate).astype(np.float64)
+        return _poisson(rng, rng.gamma(mean / spread, spread) if spread > 1e-9 else mean)
 
     def with_dispersion(self, alpha: float) -> Outcome:
         """The negative binomial with another dispersion."""
@@ -232,6 +240,15 @@ class Outcome:
                 f"{table.outcome_name} must be whole for a {self.name} outcome; it is not in rows "
                 f"{rows} (counted from 0). For rates, give the count and exposure=."
             )
+
+
+def _poisson(rng: np.random.Generator, rate: FloatArray) -> FloatArray:
+    """Poisson counts (n,); beyond what numpy can draw, normal ones, by then the same."""
+    small = rng.poisson(np.minimum(rate, MANY)).astype(np.float64)
+    if rate.max(initial=0.0) <= MANY:
+        return small
+    large = np.round(rng.normal(rate, np.sqrt(rate)))
+    return np.where(rate > MANY, large, small)
 
 
 def outcome_for(wanted: object, scale: str | None = None) -> Outcome:

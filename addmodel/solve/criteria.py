@@ -54,7 +54,7 @@ class Reml(Criterion):
     name = "reml"
 
     def scale(self, point: Point) -> float:
-        return point.problem.likelihood.scale(point.penalised_deviance, point.problem.p)
+        return point.restricted_scale
 
     def cost(self, point: Point) -> float:
         problem, scale = point.problem, self.scale(point)
@@ -83,7 +83,9 @@ class Reml(Criterion):
 
     def hessian(self, point: Point) -> FloatArray:
         scale, rough = self.scale(point), point.roughness
-        slope = point.problem.likelihood.scale_slope(point.penalised_deviance, point.problem.p)
+        # φ is in proportion to D_p (exactly so in the Gaussian case), unless it is known.
+        known = point.problem.likelihood.fixed is not None
+        slope = 0.0 if known else scale / point.penalised_deviance
         lam = point.smoothing[point.blocks]
         both = np.outer(lam, lam)
         pushes = point.by_block()

@@ -72,7 +72,7 @@ class Modes:
         """Newton's last steps, with the weights that A has; at the mode nothing moves any more."""
         for _ in range(LAST_STEPS):
             try:
-                point = self.quadratic(beta, fisher=self.expected).at(smoothing)
+                point = self.quadratic(beta, fisher=self.expected).at(smoothing, strict=True)
             except np.linalg.LinAlgError:
                 # Observed weights can be negative far from the mode of a link not canonical.
                 point = self.quadratic(beta, fisher=True).at(smoothing)

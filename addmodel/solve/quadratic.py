@@ -119,8 +119,12 @@ class Problem:
             pull=self.pull[index],
         )
 
-    def at(self, smoothing: FloatArray) -> Point:
-        """Solve at smoothing parameters λ (one a block; infinite: the block is held at zero)."""
+    def at(self, smoothing: FloatArray, *, strict: bool = False) -> Point:
+        """Solve at smoothing parameters λ (one a block; infinite: the block is held at zero).
+
+        Where S + Λ is not positive definite (rounding; observed weights far from the mode) its
+        diagonal is lifted until it is, or, if strict, numpy.linalg.LinAlgError is raised.
+        """
         blocks, index = self.active(smoothing)
         sizes = [self.sizes[j] for j in blocks]
         ridge = np.repeat(smoothing[blocks], sizes)
@@ -134,8 +138,10 @@ class Problem:
         matrix = self.schur.copy() if every else self.schur[np.ix_(index, index)]
         matrix[np.diag_indices_from(matrix)] += ridge
         factor, info = dpotrf(matrix, lower=1, clean=1)
-        if info != 0:
+        if info != 0 and strict:
             raise np.linalg.LinAlgError("S + Λ is not positive definite")
+        if info != 0:
+            factor = lifted(matrix)
         step, _ = dpotrs(factor, pull, lower=1)
         low = base - float(pull @ step)
         return Point(self, smoothing, blocks, ridge, index, factor, start + step, low)
@@ -149,6 +155,15 @@ class Problem:
         along = self.schur @ step
         base = self.base - 2 * float(self.pull @ step) + float(step @ along)
         return self.origin[index], (self.pull - along)[index], base
+
+
+def lifted(matrix: FloatArray) -> FloatArray:
+    """Lower Cholesky factor of a symmetric matrix (k, k) with its diagonal lifted above zero."""
+    values = np.linalg.eigvalsh(matrix)
+    lift = 2 * max(-float(values[0]), 1e-16 * float(np.abs(values).max()))
+    raised = matrix + lift * np.eye(len(matrix))
+    factor: FloatArray = np.linalg.cholesky(raised)
+    return factor
 
 
 @dataclass(frozen=True)
@@ -189,6 +204,11 @@ class Point:
         """∂u/∂ρ_j = −A⁻¹P_j β of the active coefficients, (k, blocks)."""
         moves: FloatArray = -self.inverse @ self.by_block()
         return moves
+
+    @cached_property
+    def restricted_scale(self) -> float:
+        """φ as the restricted likelihood has it: known, or profiled."""
+        return self.problem.likelihood.scale(self.penalised_deviance, self.problem.p)
 
     @property
     def log_det_schur(self) -> float:
@@ -259,9 +279,8 @@ class Point:
         target[p + self.index] = self.u
         target[:p] = problem.sums.at[:p]
         moved = problem.sums.moved(target)
-        target[:p] += scipy.linalg.solve(
-            problem.sums.gram[:p, :p], moved.score[:p], assume_a="pos", check_finite=False
-        )
+        factor = scipy.linalg.cho_factor(problem.sums.gram[:p, :p], lower=True, check_finite=False)
+        target[:p] += scipy.linalg.cho_solve(factor, moved.score[:p], check_finite=False)
         return target
 
     def covariance(self) -> FloatArray:
