@@ -51,6 +51,7 @@ class Laid:
             log_det_design=2 * float(np.log(np.abs(diagonal)).sum()),
             likelihood=likelihood_of(table, outcome, scale),
             expected=criterion.name != "reml",
+            null=start,
         )
         return cls(design, modes, start)
 

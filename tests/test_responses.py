@@ -196,7 +196,7 @@ def test_offset_by_column_or_values():
     same(values, column)
     same(both, column)
     np.testing.assert_allclose(column.predict(DATA), column.fitted, rtol=1e-10)
-    with pytest.raises(am.DataError, match=r"known \(offset=\)"):
+    with pytest.raises(am.DataError, match=r"no column .known.*\(offset=\)"):
         column.predict(DATA[["x", "years"]])
     with pytest.warns(am.Caution, match="predictions are at offset 0"):
         found = values.predict(DATA)

@@ -1,9 +1,9 @@
 """Automatic detail against all functions, and fast waves in noise.
 
-Ten random models of one to three curves (tests/test_detail.py): the largest difference between the fit
-with automatic detail and the fit with all functions, in pointwise standard errors. Then a sine whose
-amplitude is the noise's standard deviation, 20 samples each: found means that the fitted curve has
-a correlation above 0.9 with it, by a fit that was given nothing but `y ~ curve(x)`.
+Ten random models of one to three curves (tests/test_detail.py): the largest difference between the
+fit with automatic detail and the fit with all functions, in pointwise standard errors. Then a sine
+whose amplitude is the noise's standard deviation, 20 samples each: found means that the fitted
+curve has a correlation above 0.9 with it, by a fit that was given nothing but `y ~ curve(x)`.
 """
 
 import numpy as np

@@ -97,6 +97,8 @@ class Likelihood:
             if excess(high) < 0:
                 break
             high += 1.0
+        if not excess(low) > 0 > excess(high):
+            return start  # the likelihood has no best scale on these few rows: the moment's instead
         return float(np.exp(scipy.optimize.brentq(excess, low, high, xtol=1e-13, rtol=1e-14)))
 
     def log_likelihood(self, deviance: float, scale: float) -> float:

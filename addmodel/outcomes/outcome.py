@@ -12,6 +12,7 @@ from statsmodels.genmod.families import links
 
 from addmodel.data import Table
 from addmodel.errors import DataError, ModelError, nearest
+from addmodel.frames import BoolArray
 from addmodel.outcomes.links import inverse_link, variance
 from addmodel.spaces.base import FloatArray
 
@@ -123,16 +124,27 @@ class Outcome:
     def curvature(self, y: FloatArray, eta: FloatArray, weights: FloatArray) -> Curvature:
         """Slope, observed and Fisher weight at η."""
         mean, h1, h2, _ = inverse_link(self.family.link)(eta)
-        decided = self.kind in KNOWN_SCALE or self.kind == "Tweedie"
-        least = LEAST_WEIGHT * weights if decided else 0.0
+        least = self._least(weights)
         if self.canonical:
-            weight = np.maximum(weights * h1, least)
-            return Curvature(weights * (y - mean), weight, weight)
+            fisher = np.maximum(weights * h1, least)
+            left = self._left(y, mean, fisher > least)
+            return Curvature(weights * left, fisher, fisher)
         v, v1, _ = variance(self.family, mean)
         a, a1 = h1 / v, h2 / v - h1**2 * v1 / v**2
         fisher = np.maximum(weights * h1 * a, least)
-        observed = fisher - weights * (y - mean) * a1
-        return Curvature(weights * (y - mean) * a, observed, fisher)
+        left = self._left(y, mean, fisher > least)
+        observed = fisher - weights * left * a1
+        return Curvature(weights * left * a, observed, fisher)
+
+    def _left(self, y: FloatArray, mean: FloatArray, undecided: BoolArray) -> FloatArray:
+        """y − μ, (n,); nothing for a row that is decided, and rightly: there a mode may rest."""
+        left = y - mean
+        return np.where(undecided | (np.abs(left) > 1e-9), left, 0.0)
+
+    def _least(self, weights: FloatArray) -> FloatArray:
+        """The smallest Fisher weight a row may have, (n,): none but for counts and yes/no."""
+        decided = self.kind in KNOWN_SCALE or self.kind == "Tweedie"
+        return LEAST_WEIGHT * weights if decided else np.full_like(weights, -np.inf)
 
     def weight_slopes(
         self, y: FloatArray, eta: FloatArray, weights: FloatArray
@@ -140,13 +152,15 @@ class Outcome:
         """Derivatives in η of the observed and of the Fisher weight, each (n,)."""
         mean, h1, h2, h3 = inverse_link(self.family.link)(eta)
         if self.canonical:
-            return weights * h2, weights * h2
+            slope = np.where(weights * h1 > self._least(weights), weights * h2, 0.0)
+            return slope, slope
         v, v1, v2 = variance(self.family, mean)
         a = h1 / v
         a1 = h2 / v - h1**2 * v1 / v**2
         a2 = h3 / v - 3 * h1 * h2 * v1 / v**2 - h1**3 * (v2 / v**2 - 2 * v1**2 / v**3)
-        observed = weights * (h2 * a + 2 * h1 * a1 - (y - mean) * a2)
-        return observed, weights * (h2 * a + h1 * a1)
+        fisher = weights * (h2 * a + h1 * a1)
+        fisher = np.where(weights * h1 * a > self._least(weights), fisher, 0.0)
+        return fisher + weights * (h1 * a1 - (y - mean) * a2), fisher
 
     def pearson(self, y: FloatArray, mean: FloatArray, weights: FloatArray) -> float:
         """Pearson's X² = Σ w (y − μ)²/V(μ)."""

@@ -38,11 +38,17 @@ class Modes:
     likelihood: Likelihood
     expected: bool
     """Whether A has Fisher weights (GCV and UBRE) and not the observed ones (REML)."""
+    null: FloatArray
+    """(P,) the one constant alone: where to begin if the start given is worse than that."""
 
-    def quadratic(self, at: FloatArray, *, fisher: bool, gram: FloatArray | None = None) -> Problem:
-        """The penalised quadratic about coefficients (P,)."""
+    def quadratic(
+        self, at: FloatArray, *, fisher: bool, gram: FloatArray | None = None, strict: bool = False
+    ) -> Problem:
+        """The penalised quadratic about coefficients (P,); `strict`: see `Problem.of`."""
         sums = self.rows.sweep(at, self.outcome, fisher=fisher, gram=gram)
-        return Problem.of(sums, self.p, self.sizes, self.log_det_design, self.likelihood)
+        return Problem.of(
+            sums, self.p, self.sizes, self.log_det_design, self.likelihood, strict=strict
+        )
 
     def at(self, smoothing: FloatArray, start: FloatArray) -> ModePoint:
         """The mode at smoothing parameters λ, from a start (P,)."""
@@ -51,6 +57,9 @@ class Modes:
         ridge[held] = 0.0
         beta = np.where(held, 0.0, start)
         value = self.rows.deviance(beta, self.outcome) + float(ridge @ beta**2)
+        plain = self.rows.deviance(self.null, self.outcome)
+        if not value <= plain:
+            beta, value = self.null, plain
         for _ in range(STEPS):
             problem = self.quadratic(beta, fisher=True)
             step = problem.at(smoothing).coefficients() - beta
@@ -72,7 +81,8 @@ class Modes:
         """Newton's last steps, with the weights that A has; at the mode nothing moves any more."""
         for _ in range(LAST_STEPS):
             try:
-                point = self.quadratic(beta, fisher=self.expected).at(smoothing, strict=True)
+                problem = self.quadratic(beta, fisher=self.expected, strict=True)
+                point = problem.at(smoothing, strict=True)
             except np.linalg.LinAlgError:
                 # Observed weights can be negative far from the mode of a link not canonical.
                 point = self.quadratic(beta, fisher=True).at(smoothing)

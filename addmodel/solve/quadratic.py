@@ -54,15 +54,16 @@ class Problem:
         sizes: Sequence[int],
         log_det_design: float,
         likelihood: Likelihood,
+        *,
+        strict: bool = False,
     ) -> Problem:
         """Reduce the sums of a sweep.
 
-        Raises
-        ------
-        numpy.linalg.LinAlgError
-            If X'WX of the unpenalised columns is not positive definite.
+        Where X'WX of the unpenalised columns is not positive definite (rounding, with weights of
+        very different size; observed weights far from the mode) its diagonal is lifted until it
+        is, or, if strict, numpy.linalg.LinAlgError is raised.
         """
-        factor = scipy.linalg.cho_factor(sums.gram[:p, :p], lower=True)
+        factor = factored(sums.gram[:p, :p], strict=strict)
         cross = scipy.linalg.cho_solve(factor, sums.gram[:p, p:])
         schur = sums.gram[p:, p:] - sums.gram[p:, :p] @ cross
         return cls(
@@ -157,13 +158,28 @@ class Problem:
         return self.origin[index], (self.pull - along)[index], base
 
 
+def safe_factor(matrix: FloatArray) -> tuple[FloatArray, bool]:
+    """Cholesky factor as scipy.linalg.cho_solve takes it, lifted where rounding asks for it."""
+    factor, info = dpotrf(matrix, lower=1, clean=1)
+    return (factor if info == 0 else lifted(matrix)), True
+
+
 def lifted(matrix: FloatArray) -> FloatArray:
     """Lower Cholesky factor of a symmetric matrix (k, k) with its diagonal lifted above zero."""
     values = np.linalg.eigvalsh(matrix)
-    lift = 2 * max(-float(values[0]), 1e-16 * float(np.abs(values).max()))
+    lift = 2 * max(-float(values[0]), 1e-15 * float(np.abs(values).max()))
     raised = matrix + lift * np.eye(len(matrix))
-    factor: FloatArray = np.linalg.cholesky(raised)
-    return factor
+    return np.asarray(np.linalg.cholesky(raised), dtype=np.float64)
+
+
+def factored(matrix: FloatArray, *, strict: bool = False) -> tuple[FloatArray, bool]:
+    """A lower Cholesky factor as scipy's cho_solve takes it, the matrix lifted if need be."""
+    try:
+        return np.asarray(np.linalg.cholesky(matrix), dtype=np.float64), True
+    except np.linalg.LinAlgError:
+        if strict:
+            raise
+        return lifted(matrix), True
 
 
 @dataclass(frozen=True)
@@ -279,7 +295,7 @@ class Point:
         target[p + self.index] = self.u
         target[:p] = problem.sums.at[:p]
         moved = problem.sums.moved(target)
-        factor = scipy.linalg.cho_factor(problem.sums.gram[:p, :p], lower=True, check_finite=False)
+        factor = factored(problem.sums.gram[:p, :p])
         target[:p] += scipy.linalg.cho_solve(factor, moved.score[:p], check_finite=False)
         return target
 
@@ -289,7 +305,7 @@ class Point:
         gram = problem.sums.gram
         full = np.zeros_like(gram)
         used = p + self.index
-        factor = scipy.linalg.cho_factor(gram[:p, :p], lower=True)
+        factor = factored(gram[:p, :p])
         cross = scipy.linalg.cho_solve(factor, gram[np.ix_(np.arange(p), used)])  # (p, k)
         full[np.ix_(used, used)] = self.inverse
         across = -cross @ self.inverse
