@@ -16,7 +16,7 @@ LINKS = ("probit", "cloglog")
 OUTCOMES = (*NAMES, *LINKS)
 YES_NO = ("binomial", *LINKS)
 COUNTS = ("poisson", "negative binomial")
-CASES = 60
+CASES = 30
 
 
 class Case(NamedTuple):

@@ -32,8 +32,8 @@ def section(script: str, title: str, text: str, table: Sequence[Sequence[object]
     parts = re.split(r"(?m)^(?=## )", old)
     mine = [i for i, part in enumerate(parts) if f"validation.{script}`" in part and i > 0]
     if mine:
-        parts[mine[0]] = new + "\n"
+        parts[mine[0]] = new
     else:
-        parts = [parts[0].rstrip() + "\n\n", *parts[1:], new + "\n"]
-    RESULTS.write_text("".join(parts).rstrip() + "\n", encoding="utf-8")
+        parts.append(new)
+    RESULTS.write_text("\n\n".join(part.rstrip() for part in parts) + "\n", encoding="utf-8")
     print(new)
