@@ -158,12 +158,6 @@ class Problem:
         return self.origin[index], (self.pull - along)[index], base
 
 
-def safe_factor(matrix: FloatArray) -> tuple[FloatArray, bool]:
-    """Cholesky factor as scipy.linalg.cho_solve takes it, lifted where rounding asks for it."""
-    factor, info = dpotrf(matrix, lower=1, clean=1)
-    return (factor if info == 0 else lifted(matrix)), True
-
-
 def lifted(matrix: FloatArray) -> FloatArray:
     """Lower Cholesky factor of a symmetric matrix (k, k) with its diagonal lifted above zero."""
     values = np.linalg.eigvalsh(matrix)
