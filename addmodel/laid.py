@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+from collections.abc import Callable
 from dataclasses import dataclass, replace
 
 import numpy as np
@@ -15,12 +16,14 @@ from addmodel.outcomes.likelihood import Likelihood
 from addmodel.rows.dense import DenseRows
 from addmodel.solve.criteria import Criterion
 from addmodel.solve.pirls import Modes
-from addmodel.solve.quadratic import Point
-from addmodel.solve.smoothness import Smoothness, choose, choose_mode, polish
+from addmodel.solve.quadratic import IndexArray, Point
+from addmodel.solve.smoothness import MODALLY, Smoothness, choose, choose_mode, newton, polish
 from addmodel.spaces.base import FloatArray
 
 DIGITS = 1e-5
 """When so little of the starting deviance is left, it is summed again about the solution."""
+DISPERSIONS = (float(np.log(1e-6)), float(np.log(1e3)))
+"""Range of log α of the negative binomial."""
 
 
 @dataclass(frozen=True)
@@ -77,15 +80,18 @@ class Laid:
         if not self.modes.outcome.plain:
             return choose_mode(self.modes, criterion, fixed, degrees, self.start)
         first = choose(problem, criterion, fixed, degrees)
-        free = np.flatnonzero(
-            [f is None and d is None for f, d in zip(fixed, degrees, strict=True)]
-        )
         point = first.point
         if point.penalised_deviance < DIGITS * problem.sums.deviance:
             gram = problem.sums.gram  # a Gaussian outcome's weights do not change with its mean
             again = self.modes.quadratic(point.coefficients(), fisher=True, gram=gram)
             point = again.at(point.smoothing)
-        return polish(first, point, criterion, free)
+        return polish(first, point, criterion, self.free_blocks)
+
+    @property
+    def free_blocks(self) -> IndexArray:
+        """The blocks whose smoothing parameter is to be chosen."""
+        owners = [self.design.components[j] for j in self.design.block_owners]
+        return np.flatnonzero([c.smoothing is None and c.df is None for c in owners])
 
 
 def row_weights(table: Table) -> FloatArray:
@@ -130,25 +136,42 @@ def with_best_dispersion(
 ) -> tuple[Outcome, Smoothness]:
     """The negative binomial's dispersion α at the optimum of the criterion, with its smoothness.
 
-    At given smoothing parameters α minimises the criterion in one variable; α and the smoothing
-    parameters are improved in turn until α stays.
+    First α alone, the smoothing parameters held; then α is the outer coordinate of the criterion
+    profiled over the free smoothing parameters, which start from those of the α before.
     """
     first = laid.modes.outcome
+    free = laid.free_blocks
+    found = smoothness
 
-    def at(alpha: float) -> Laid:
-        return laid.with_outcome(first.with_dispersion(alpha))
+    def modes(log_alpha: float) -> Modes:
+        return laid.with_outcome(first.with_dispersion(float(np.exp(log_alpha)))).modes
 
-    found, alpha = smoothness, float(first.family.alpha)
-    for _ in range(12):
-        best = scipy.optimize.minimize_scalar(
-            lambda t, here, mode: criterion.cost(at(float(np.exp(t))).modes.at(here, mode)),
-            args=(found.point.smoothing, found.point.coefficients()),
-            bounds=(np.log(1e-6), np.log(1e3)),
-            method="bounded",
-            options={"xatol": 1e-7},
-        )
-        before, alpha = alpha, float(np.exp(best.x))
-        found = at(alpha).smoothness(criterion)
-        if abs(np.log(alpha / before)) < 1e-6:
+    def held(log_alpha: float) -> float:
+        return criterion.cost(modes(log_alpha).at(smoothness.point.smoothing, laid.start))
+
+    def profiled(log_alpha: float) -> float:
+        nonlocal found
+        mode = found.point.coefficients()
+        point = modes(log_alpha).at(found.point.smoothing, mode)
+        found = newton(point, criterion, free, MODALLY)
+        return criterion.cost(found.point)
+
+    best = _lowest(held, *DISPERSIONS, 0.05)
+    for _ in range(4):
+        low, high = max(best - 1.0, DISPERSIONS[0]), min(best + 1.0, DISPERSIONS[1])
+        best = _lowest(profiled, low, high, 1e-6)
+        profiled(best)
+        if low + 1e-3 < best < high - 1e-3 or not DISPERSIONS[0] < best < DISPERSIONS[1]:
             break
-    return first.with_dispersion(alpha), found
+    alone, found = found, replace(found, steps=smoothness.steps + found.steps)
+    again = laid.with_outcome(first.with_dispersion(float(np.exp(best)))).smoothness(criterion)
+    if criterion.cost(again.point) < criterion.cost(alone.point) - 1e-6:
+        found = again  # another optimum of the smoothing parameters is better at this α
+    return first.with_dispersion(float(np.exp(best))), found
+
+
+def _lowest(cost: Callable[[float], float], low: float, high: float, within: float) -> float:
+    found = scipy.optimize.minimize_scalar(
+        cost, bounds=(low, high), method="bounded", options={"xatol": within}
+    )
+    return float(found.x)

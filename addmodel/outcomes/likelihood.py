@@ -9,13 +9,18 @@ unpenalised coefficients, and is profiled out by a root in one variable.
 from __future__ import annotations
 
 from dataclasses import dataclass
+from functools import cached_property
 
 import numpy as np
 import scipy.optimize
+from numpy.polynomial import Chebyshev
 from scipy.special import gammaln, psi, xlogy
 
 from addmodel.outcomes.outcome import Outcome
 from addmodel.spaces.base import FloatArray
+
+PIECE = 4.0
+DEGREE = 28
 
 
 @dataclass(frozen=True)
@@ -60,9 +65,25 @@ class Likelihood:
             best = xlogy(y, y) - (y + a) * np.log(y + a) + xlogy(a, a)
             rest = gammaln(y + a) - gammaln(a) - gammaln(y + 1)
             return float((c * w) @ (best + rest)) / scale
-        rows = y > 0
-        density = self.outcome.family.loglike_obs(y[rows], y[rows], w[rows], scale)
-        return float(c[rows] @ density)
+        piece = int(np.floor(np.log(scale) / PIECE))
+        if piece not in self._pieces:
+            ends = (PIECE * piece, PIECE * (piece + 1))
+            self._pieces[piece] = Chebyshev.interpolate(self._saturated_tweedie, DEGREE, ends)
+        return float(self._pieces[piece](np.log(scale)))
+
+    @cached_property
+    def _pieces(self) -> dict[int, Chebyshev]:
+        """ℓ_sat of a Tweedie outcome along log φ, in pieces of length PIECE as they are needed.
+
+        It is a long series for every row, and the search for φ asks for it thousands of times.
+        """
+        return {}
+
+    def _saturated_tweedie(self, log_scales: FloatArray) -> FloatArray:
+        rows = self.y > 0
+        y, w, c = self.y[rows], self.weights[rows], self.counts[rows]
+        density = self.outcome.family.loglike_obs
+        return np.array([c @ density(y, y, w, scale) for scale in np.exp(log_scales)])
 
     def saturated_slope(self, scale: float) -> float:
         """∂ℓ_sat/∂log φ."""
