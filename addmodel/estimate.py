@@ -59,8 +59,7 @@ class Estimate:
     covariance: FloatArray  # (P, P) posterior: σ² A⁻¹ (Wahba 1983, J. R. Stat. Soc. B 45)
     column_df: FloatArray  # (P,) diag(A⁻¹X'WX) with Fisher weights
     smoothing_spread: FloatArray  # (P, k) times its transpose: what uncertain smoothing adds to it
-    corrected_df: float
-    """Effective degrees of freedom with the smoothing parameters' uncertainty, for the AIC."""
+    smoothing_root: FloatArray  # (blocks, k) times its transpose: the covariance of log λ
     shares: FloatArray  # (components,) cov(f_j, η)/var(η) in the prior weights
     smoothing: FloatArray  # (blocks,) λ, may be infinite
     scale: float
@@ -202,7 +201,7 @@ def _estimate(
     dispersion = pearson / max(likelihood.n - fisher.effective_df, 1.0)
     owners = [design.components[j] for j in design.block_owners]
     free = [j for j, c in enumerate(owners) if c.smoothing is None and c.df is None]
-    spread = smoothing_spread(point, criterion, free)
+    spread, root = smoothing_spread(point, criterion, free)
     return Estimate(
         model=model,
         design=design,
@@ -212,7 +211,7 @@ def _estimate(
         covariance=scale * point.covariance(),
         column_df=np.einsum("ij,ji->i", fisher.covariance(), gram),
         smoothing_spread=spread,
-        corrected_df=fisher.effective_df + float(np.sum(spread * (gram @ spread))) / scale,
+        smoothing_root=root,
         shares=_shares(laid, beta, weights),
         smoothing=point.smoothing,
         scale=scale,

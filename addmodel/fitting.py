@@ -21,6 +21,7 @@ from addmodel.inference import (
     DEFAULT_SEED,
     coefficients_table,
     components_table,
+    corrected_df,
     posterior_draws,
 )
 from addmodel.outcomes import outcome_for
@@ -244,9 +245,9 @@ class Fit:
     def aic_corrected(self) -> float:
         """AIC that also counts the smoothing parameters' uncertainty (Wood, Pya & Säfken 2016,
 
-        J. Am. Stat. Assoc. 111; its first-order part).
+        J. Am. Stat. Assoc. 111).
         """
-        return self._aic(self.estimate.corrected_df)
+        return self._aic(corrected_df(self.estimate))
 
     def _aic(self, df: float) -> float:
         outcome = self.estimate.outcome

@@ -62,6 +62,36 @@ def linear(
     return value, np.sqrt(np.maximum(variance, 0.0))
 
 
+def corrected_df(estimate: Estimate) -> float:
+    """τ + tr((V' + V'')X'WX)/φ: effective degrees of freedom for an AIC that counts the smoothing
+    parameters' uncertainty (Wood, Pya & Säfken 2016, J. Am. Stat. Assoc. 111).
+
+    V' = J V_ρ J'. V'' = φ Σ_kl (V_ρ)_kl ∂L/∂ρ_k (∂L/∂ρ_l)' for the lower Cholesky factor L of A⁻¹:
+    from ∂A⁻¹/∂ρ_k = −λ_k A⁻¹E_kA⁻¹, with E_k the identity on block k, follows ∂L/∂ρ_k = LΦ(M_k),
+    M_k = −λ_k L'E_kL and Φ the lower triangle with half the diagonal; and X'WX = A − Λ.
+    """
+    design, spread = estimate.design, estimate.smoothing_spread
+    used = np.flatnonzero(np.diag(estimate.covariance) > 0)
+    inverse = estimate.covariance[np.ix_(used, used)] / estimate.scale
+    size = np.sqrt(np.diag(inverse))
+    root = size[:, None] * np.linalg.cholesky(inverse / np.outer(size, size))
+    ridge = np.zeros(len(estimate.coefficients))
+    owner = np.full(len(ridge), -1)
+    for k, place in enumerate(design.block_places):
+        ridge[place] = estimate.smoothing[k] if np.isfinite(estimate.smoothing[k]) else 0.0
+        owner[place] = k
+    penalty = root.T @ (ridge[used, None] * root)
+    kept = np.eye(len(used)) - penalty  # L'X'WXL
+    first = scipy.linalg.solve_triangular(root, spread[used], lower=True) / np.sqrt(estimate.scale)
+    total = float(estimate.column_df.sum() + np.sum(first * (kept @ first)))
+    turned = []
+    for column in estimate.smoothing_root.T:
+        push = ridge[used] * np.where(owner[used] >= 0, column[owner[used]], 0.0)
+        moved = -root.T @ (push[:, None] * root)
+        turned.append(np.tril(moved, -1) + np.diag(np.diag(moved) / 2))
+    return total + sum(float(np.sum(t * (kept @ t))) for t in turned)
+
+
 def coefficients_table(estimate: Estimate, level: float = 0.95) -> pd.DataFrame:
     """Unpenalised coefficients as reported: estimate, std_error, lower, upper, p.
 

@@ -96,3 +96,44 @@ def test_new_counts_are_covered():
     table = fit.predict({"x": X[:200]}, interval=0.9, new_observation=True)
     inside = ((fresh >= table["lower"]) & (fresh <= table["upper"])).mean()
     assert 0.86 < inside < 0.99  # whole numbers cover a little more than 90 %
+
+
+def test_corrected_degrees_of_freedom_against_differences_of_cholesky_factors():
+    """τ + tr((V' + V'')X'WX)/φ with ∂β/∂ρ and ∂L/∂ρ from refits (Wood, Pya & Säfken 2016)."""
+    rng = np.random.default_rng(4)
+    data = {"x": rng.uniform(size=200), "z": rng.uniform(size=200)}
+    data["y"] = np.sin(6 * data["x"]) + np.cos(5 * data["z"]) + 0.4 * rng.normal(size=200)
+    fit = am.fit("y ~ curve(x, detail=20) + curve(z, detail=20)", data)
+    estimate = fit.estimate
+
+    def at(smoothing):
+        a, b = (float(lam) for lam in smoothing)
+        near = am.fit(
+            f"y ~ curve(x, detail=20, smoothing={a}) + curve(z, detail=20, smoothing={b})", data
+        ).estimate
+        return np.linalg.cholesky(near.covariance / near.scale), near.coefficients
+
+    h, roots, moves = 1e-4, [], []
+    for k in range(2):
+        up, down = estimate.smoothing.copy(), estimate.smoothing.copy()
+        up[k] *= np.exp(h)
+        down[k] *= np.exp(-h)
+        (root_up, beta_up), (root_down, beta_down) = at(up), at(down)
+        roots.append((root_up - root_down) / (2 * h))
+        moves.append((beta_up - beta_down) / (2 * h))
+    spread = estimate.smoothing_root @ estimate.smoothing_root.T
+    information = np.linalg.inv(estimate.covariance / estimate.scale)
+    for place, lam in zip(estimate.design.block_places, estimate.smoothing, strict=True):
+        information[place, place] -= lam * np.eye(place.stop - place.start)
+    gain = sum(
+        spread[k, m]
+        * (
+            np.trace(roots[k].T @ information @ roots[m])
+            + moves[k] @ information @ moves[m] / estimate.scale
+        )
+        for k in range(2)
+        for m in range(2)
+    )
+    df = (fit.aic_corrected + 2 * fit.log_likelihood) / 2 - 1
+    assert df == pytest.approx(fit.effective_df + gain, abs=1e-5)
+    assert gain > 0.1

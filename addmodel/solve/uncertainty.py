@@ -2,8 +2,7 @@
 
 Near an optimum ρ̂ of REML the parameters ρ = log λ have covariance V_ρ = H⁻¹, H the Hessian of the
 cost; to first order the coefficients' posterior covariance then gains V' = J V_ρ J', J = ∂β̂/∂ρ
-(Kass & Steffey 1989, J. Am. Stat. Assoc. 84). The effective degrees of freedom of an AIC gain
-tr(V' X'WX)/φ (Wood, Pya & Säfken 2016, J. Am. Stat. Assoc. 111; its first-order part).
+(Kass & Steffey 1989, J. Am. Stat. Assoc. 84).
 """
 
 from __future__ import annotations
@@ -20,17 +19,24 @@ FLAT = 1e-6
 """A direction in which the cost curves less than this part of the most curved says nothing."""
 
 
-def smoothing_spread(point: Point, criterion: Criterion, free: list[int]) -> FloatArray:
-    """J V_ρ^½, shape (P, k): times its transpose it is V'; no columns where nothing was chosen."""
+def smoothing_spread(
+    point: Point, criterion: Criterion, free: list[int]
+) -> tuple[FloatArray, FloatArray]:
+    """J V_ρ^½ (P, k) and V_ρ^½ (blocks, k): times their transposes they are V' and V_ρ.
+
+    No columns where nothing was chosen.
+    """
     chosen = [i for i, j in enumerate(point.blocks) if j in free]
     moves = point.full_moves()[:, chosen]
     if criterion.name != "reml" or not chosen:
-        return moves[:, :0]
+        return moves[:, :0], np.zeros((len(point.smoothing), 0))
     hessian = _exact_hessian(point, criterion, chosen)
     values, vectors = np.linalg.eigh((hessian + hessian.T) / 2)
     curved = values > FLAT * max(float(values.max()), FLAT)
-    spread: FloatArray = moves @ (vectors[:, curved] / np.sqrt(values[curved]))
-    return spread
+    root = vectors[:, curved] / np.sqrt(values[curved])
+    every = np.zeros((len(point.smoothing), root.shape[1]))
+    every[[point.blocks[i] for i in chosen]] = root
+    return moves @ root, every
 
 
 def _exact_hessian(point: Point, criterion: Criterion, chosen: list[int]) -> FloatArray:
