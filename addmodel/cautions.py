@@ -6,17 +6,21 @@ from collections.abc import Iterator
 
 import numpy as np
 
-from addmodel.component import Design
 from addmodel.data import Table
+from addmodel.design import Design
 from addmodel.outcomes import Outcome
 from addmodel.solve.detail import CEILING
 from addmodel.solve.smoothness import Smoothness
-from addmodel.spaces.base import FloatArray, Penalised
+from addmodel.spaces.base import FloatArray, Space
 from addmodel.spaces.cycle import GAP, Cycle
+from addmodel.spaces.group import Group
 from addmodel.spaces.levels import Levels
+from addmodel.spaces.place import Place
+from addmodel.spaces.scattered import Scattered
 
 FAR = 1.2
 """Pearson's dispersion above this is said."""
+FEW_ROWS = 5
 EXTREME = 1e-6
 """A fitted probability closer than this to 0 or 1 is said."""
 
@@ -41,17 +45,36 @@ def of_smoothness(design: Design, smoothness: Smoothness) -> Iterator[str]:
             f"The smoothing parameter of {names[j]} ran to zero: it follows the data as closely "
             "as its functions allow. Look for repeated rows or an outcome without noise."
         )
-    for component in design.components:
-        (space,) = component.spaces
-        if isinstance(space, Cycle):
-            yield from _of_cycle(design, component.name, space)
-        if not isinstance(space, Penalised) or component.everything:
-            continue
-        if space.size == CEILING < space.most:
+    for owner, block in design.owned_blocks:
+        component = design.components[owner]
+        if not block.everything and len(block.functions) == CEILING:
             yield (
                 f"{component.name} uses {CEILING} functions, the most that are kept unless "
                 'detail="all" is given.'
             )
+    named: dict[str, Space] = {}
+    for component in design.components:
+        for space in component.spaces:
+            named.setdefault(space.key, space)
+    for space in named.values():
+        if isinstance(space, Cycle):
+            yield from _of_cycle(design, space)
+        if isinstance(space, Scattered) and not space.everywhere:
+            yield (
+                f"The map of {space.key} rests on {len(space.knots)} well-spread sites of "
+                f"{space.distinct:,}: finer detail than they allow is not in it."
+            )
+        if isinstance(space, Place) and _looks_like_degrees(space):
+            yield (
+                f"place({space.key}) looks like degrees, whose east and north are not of one "
+                f"length. Write globe({space.key}) with the latitude first, or project them."
+            )
+
+
+def _looks_like_degrees(space: Place) -> bool:
+    names = " ".join(space.keys).lower()
+    inside = bool((np.abs(space.low) <= 180).all() and space.length <= 360)
+    return inside and "lat" in names and "lon" in names
 
 
 def of_freedom(n: float, effective_df: float, counted: bool) -> Iterator[str]:
@@ -81,6 +104,8 @@ def of_outcome(
                 "it have no finite best value; read their size and standard errors as 'large'."
             )
     sparse = outcome.kind == "Binomial" and bool((table.trials == 1).all())
+    if sparse:
+        yield from _small_groups(design, table)
     if outcome.scale_known and not sparse and dispersion > FAR:
         remedy = (
             "outcome='negative binomial' or scale='estimated'"
@@ -100,17 +125,31 @@ def of_outcome(
         )
 
 
-def _of_cycle(design: Design, name: str, space: Cycle) -> Iterator[str]:
+def _of_cycle(design: Design, space: Cycle) -> Iterator[str]:
     if space.gap[1] > GAP:
         yield (
-            f"{name}: {100 * space.gap[1]:.0f} % of the period is without data. The curve there "
+            f"cycle({space.key}): {100 * space.gap[1]:.0f} % of the period is without data. The curve there "
             "is a guess; predictions there are flagged as outside."
         )
     if design.columns[space.key].kind == "date" and not isinstance(space.period, str):
         yield (
-            f"{name}: {space.key} is a date, so its period is {space.period:g} days. For the time "
+            f"cycle({space.key}): {space.key} is a date, so its period is {space.period:g} days. For the time "
             "of the day or year write period='day' or period='year'."
         )
+
+
+def _small_groups(design: Design, table: Table) -> Iterator[str]:
+    """Groups of few yes/no rows: Laplace's approximation takes their variance for too small."""
+    values = {key: column.values for key, column in table.columns.items()}
+    groups = {s.key: s for c in design.components for s in c.spaces if isinstance(s, Group)}
+    for space in groups.values():
+        rows = np.bincount(space.codes(space.seen(values)), table.counts, minlength=space.size)
+        if np.median(rows) < FEW_ROWS:
+            yield (
+                f"Half of the groups of {space.key} have fewer than {FEW_ROWS} yes/no rows: "
+                "Laplace's approximation then takes the variation between groups for too small, "
+                "and so their effects and their share of the intervals."
+            )
 
 
 def _inverse(outcome: Outcome) -> bool:
@@ -119,11 +158,12 @@ def _inverse(outcome: Outcome) -> bool:
 
 def _empty_levels(design: Design, table: Table, outcome: Outcome) -> Iterator[str]:
     """Levels without any event (or, yes/no, without any non-event): their coefficient runs off."""
+    values = {key: column.values for key, column in table.columns.items()}
     for component in design.components:
-        (space,) = component.spaces
+        space = component.single
         if not isinstance(space, Levels):
             continue
-        codes = np.asarray(table.columns[space.key].values, dtype=np.int64)
+        codes = space.codes(space.seen(values))
         size = table.counts * table.trials
         rows = np.bincount(codes, size, minlength=len(space.labels))
         events = np.bincount(codes, size * table.outcome, minlength=len(space.labels))

@@ -32,6 +32,8 @@ from addmodel.frames import (
 FloatArray: TypeAlias = npt.NDArray[np.float64]
 IntArray: TypeAlias = npt.NDArray[np.int64]
 
+LEVELLED = ("levels", "group")
+"""Factors that take any column as levels."""
 MISSING_LEVEL = -1
 UNSEEN_LEVEL = -2
 
@@ -69,7 +71,7 @@ class Unseen:
 
 def column_key(factor: Factor, expression: Expression) -> str:
     """Key of a factor's column: apart for C(x), so that x can be a number and levels at once."""
-    return f"C({expression.text})" if factor.kind == "levels" else expression.text
+    return f"C({expression.text})" if factor.kind in LEVELLED else expression.text
 
 
 def covariates(model: Model) -> Iterator[tuple[str, Factor, Expression]]:
@@ -161,8 +163,10 @@ def fitted_columns(model: Model, raw: Raw, rows: IntArray) -> dict[str, Column]:
     for key, factor, expression in covariates(model):
         if key not in columns:
             values = raw.values(expression, rows)
-            columns[key] = _column(expression.text, values, factor.kind == "levels")
-        if factor.kind in ("curve", "cycle") and columns[key].kind == "levels":
+            columns[key] = _column(expression.text, values, factor.kind in LEVELLED)
+        if factor.kind in ("place", "globe") and columns[key].kind == "date":
+            raise DataError(f"{factor.name}: {key} is a date, and coordinates are numbers.")
+        if factor.kind not in ("plain", *LEVELLED) and columns[key].kind == "levels":
             values = raw.values(expression, rows)
             raise DataError(
                 f"{factor.name}: {key} is {plain_kind(values)}; write `{key}` or `C({key})` for "

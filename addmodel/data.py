@@ -77,6 +77,12 @@ class Table:
     trials: FloatArray
     event: str | None
 
+    @property
+    def prior(self) -> FloatArray:
+        """Prior weight times count times trials, (n,)."""
+        weights: FloatArray = self.weights * self.counts * self.trials
+        return weights
+
 
 @dataclass(frozen=True, eq=False)
 class NewRows:

@@ -1,57 +1,60 @@
-"""Partial effects: what each component adds, along its covariate, with its band."""
+"""Partial effects: what a component, or a sum of them, adds along its covariates, with its band."""
 
 from __future__ import annotations
 
-from collections.abc import Iterable
-from dataclasses import dataclass
-from typing import TYPE_CHECKING, Any, Literal
+from collections.abc import Sequence
+from dataclasses import dataclass, replace
+from typing import TYPE_CHECKING, Literal
 
 import numpy as np
 import pandas as pd
 
-from addmodel import figures
-from addmodel.columns import Column
-from addmodel.component import Component
-from addmodel.errors import ModelError, nearest
+from addmodel import figures, joints
+from addmodel.errors import ModelError
 from addmodel.estimate import Estimate
-from addmodel.inference import linear, quantile
-from addmodel.prediction import components_named
-from addmodel.spaces.base import FloatArray
+from addmodel.formula import find_sum
+from addmodel.grids import Axis, along, axes, near_data, product, shown, within
+from addmodel.inference import quantile
+from addmodel.matrix import DesignMatrix
+from addmodel.spaces.base import Values
 from addmodel.spaces.cycle import Cycle
+from addmodel.spaces.group import Group
 from addmodel.spaces.levels import Levels
 from addmodel.spaces.line import Line
+from addmodel.spaces.scattered import Scattered
 
 if TYPE_CHECKING:
     from matplotlib.axes import Axes
 
-GRID = 201
+MOST_NAMED = 40
+"""Groups up to which a figure names each."""
 
 
 @dataclass(frozen=True, repr=False)
 class Effect:
-    """A component's partial effect.
+    """A partial effect.
 
     Attributes
     ----------
     component : str
         Its name.
     table : pandas.DataFrame
-        The covariate under its own name, then effect, std_error, lower, upper: the difference from
-        the component's average over the data, on the scale of the linear predictor, with a
-        pointwise band.
-    panel : figures.Panel
+        The covariates under their own names, then effect, std_error, lower, upper: the difference
+        from the average over the data, on the scale of the linear predictor, with a pointwise band.
+        Over two numbers also `outside`: no data are near.
+    panel : figures.Panel, joints.Surface or joints.Family
         The same as a picture.
     """
 
     component: str
     table: pd.DataFrame
-    panel: figures.Panel
+    panel: figures.AnyPanel
 
     def __repr__(self) -> str:
         return f"Effect of {self.component}, {len(self.table)} rows\n{self.table.head()}"
 
     def plot(self, ax: Axes | None = None) -> Axes:
-        """Draw the effect, on `ax` if it is given; returns the axes."""
+        """Draw the effect, on `ax` if it is given (a curve or levels only); returns the axes."""
         return figures.draw(self.panel, ax)
 
 
@@ -59,144 +62,217 @@ def effect(estimate: Estimate, name: str, *, at: object, level: float) -> Effect
     """See `Fit.effect`."""
     if not isinstance(name, str):
         raise ModelError(f"Name one component, such as 'curve(x)'; got {name!r}.")
-    (j,) = components_named(estimate, name)
-    component = estimate.design.components[j]
-    (space,) = component.spaces
-    column = estimate.design.columns[space.key]
-    x = grid(estimate, component) if at is None else _given(column, at)
-    places = estimate.design.places(j)
-    columns = estimate.design.component_matrix(j, {space.key: x})
-    value, error = linear(estimate, columns, places)
+    known = [c.name for c in estimate.design.components]
+    chosen = [known.index(found) for found in find_sum(name, known)]
+    found = axes(estimate, chosen, at)
+    values, n = product(found)
+    matrix = estimate.design.of_components(values, n, chosen)
+    value = matrix.times(estimate.coefficients)
+    error = np.sqrt(np.maximum(estimate.posterior.variance(matrix), 0.0))
     half = quantile(estimate, level) * error
     table = pd.DataFrame(
         {
-            space.key: _shown(x, column.kind, column.levels, space),
+            **shown(values, estimate.design.columns),
             "effect": value,
             "std_error": error,
             "lower": value - half,
             "upper": value + half,
         }
     )
-    spread = estimate.design.spreads[space.key]
-    cyclic = isinstance(space, Cycle)
-    codes = x.astype(np.int64) if column.kind == "levels" else np.empty(0, dtype=np.int64)
-    along = np.arange(len(x), dtype=np.float64) if len(codes) else _along(space, x)
-    order = np.argsort(along, kind="stable")  # at= may come in any order; a picture ascends
-    panel = figures.Panel(
-        kind=_kind(space),
-        covariate=_axis_label(space),
-        quantity=_quantity(estimate),
-        x=along[order],
-        effect=value[order],
-        lower=(value - half)[order],
-        upper=(value + half)[order],
+    running = [axis for axis in found if not axis.discrete]
+    if len(running) > 1:
+        table["outside"] = ~near_data(estimate, found, values)
+    whole = known[chosen[0]] if len(chosen) == 1 else name
+    picture = _picture(estimate, found, table, matrix, level, values)
+    return Effect(whole, table, picture)
+
+
+def effect_to_draw(estimate: Estimate, component: int) -> Effect:
+    """A component's effect as a sheet shows it: curves by level together with their margins.
+
+    The deviations are beside them; a surface is the component alone.
+    """
+    design = estimate.design
+    name = design.components[component].name
+    alone = effect(estimate, name, at=None, level=0.95)
+    if not isinstance(alone.panel, joints.Family):
+        return alone
+    own = {f.name for f in estimate.model.terms[component].factors}
+    names = [t.name for t in estimate.model.terms if {f.name for f in t.factors} <= own]
+    together = effect(estimate, " + ".join(names), at=None, level=0.95)
+    if not isinstance(together.panel, joints.Family):
+        return alone
+    return replace(together, component=name)
+
+
+def _picture(
+    estimate: Estimate,
+    found: Sequence[Axis],
+    table: pd.DataFrame,
+    matrix: DesignMatrix,
+    level: float,
+    values: Values,
+) -> figures.AnyPanel:
+    """A panel for one covariate, a family for curves by level, a surface over two numbers."""
+    running = [axis for axis in found if not axis.discrete]
+    apart = [axis for axis in found if axis.discrete and len(axis.values) > 1]
+    if len(running) == 2:
+        return _surface(estimate, running, table)
+    if len(running) == 1 and apart:
+        return _family(estimate, running[0], apart, table, matrix, level)
+    if len(running) == 1:
+        return _curve(estimate, running[0], table, level)
+    return _levels(estimate, found, table, level, values)
+
+
+def _curve(estimate: Estimate, axis: Axis, table: pd.DataFrame, level: float) -> figures.Panel:
+    space = axis.space
+    spread, cyclic = estimate.design.spreads[axis.keys[0]], isinstance(space, Cycle)
+    x = along(axis)
+    order = np.argsort(x, kind="stable")  # at= may come in any order; a picture ascends
+    quantiles = spread.quantiles
+    return figures.Panel(
+        kind=_kind(axis),
+        covariate=_axis_label(axis),
+        quantity=quantity(estimate),
+        x=x[order],
+        effect=table["effect"].to_numpy()[order],
+        lower=table["lower"].to_numpy()[order],
+        upper=table["upper"].to_numpy()[order],
         level=level,
-        labels=tuple(column.levels[code] for code in codes),
-        quantiles=np.sort(_along(space, spread.quantiles)) if cyclic else spread.quantiles,
-        shares=spread.shares[codes],
-        dates=column.kind == "date" and not cyclic,
+        quantiles=np.sort(within(space, quantiles)) if isinstance(space, Cycle) else quantiles,
+        dates=estimate.design.columns[axis.keys[0]].kind == "date" and not cyclic,
         period=space.period if isinstance(space, Cycle) else None,
     )
-    return Effect(component.name, table, panel)
 
 
-def grid(estimate: Estimate, component: Component) -> FloatArray:
-    """Where an effect is shown unless asked otherwise: over the data, evenly."""
-    (space,) = component.spaces
-    column = estimate.design.columns[space.key]
-    if isinstance(space, Levels):
-        return np.arange(len(column.levels), dtype=np.float64)
-    if isinstance(space, Cycle) and not isinstance(space.period, str):
-        return np.linspace(0.0, space.period, GRID)
-    if isinstance(space, Cycle):
-        # A calendar period has no length of its own: days of the data's first full period.
-        first = float(estimate.design.spreads[space.key].quantiles[0])
-        return _calendar(first, str(space.period))
-    spread = estimate.design.spreads[space.key].quantiles
-    low, high = (
-        (space.low, space.high)
-        if isinstance(space, Line)
-        else (float(spread[0]), float(spread[-1]))
+def _levels(
+    estimate: Estimate, found: Sequence[Axis], table: pd.DataFrame, level: float, values: Values
+) -> figures.Panel:
+    """Levels in their order; groups from the lowest effect to the highest."""
+    design = estimate.design
+    each = [axis.labels(design.columns) for axis in found]
+    labels = [" · ".join(parts) for parts in _combinations(each)]
+    shares = np.empty(0)
+    order = np.arange(len(labels))
+    if len(found) == 1 and isinstance(found[0].space, Levels):
+        space = found[0].space
+        shares = space.shares[space.codes(found[0].values)]
+    if any(isinstance(axis.space, Group) for axis in found):
+        order = np.argsort(table["effect"].to_numpy(), kind="stable")
+    crowded = len(labels) > MOST_NAMED
+    return figures.Panel(
+        kind="ranked" if crowded else "levels",
+        covariate=", ".join(key for axis in found for key in axis.keys),
+        quantity=quantity(estimate),
+        x=np.arange(len(labels), dtype=np.float64),
+        effect=table["effect"].to_numpy()[order],
+        lower=table["lower"].to_numpy()[order],
+        upper=table["upper"].to_numpy()[order],
+        level=level,
+        labels=() if crowded else tuple(labels[i] for i in order),
+        shares=shares[order] if len(shares) else shares,
     )
-    return np.linspace(low, high, GRID)
 
 
-def _calendar(first: float, period: str) -> FloatArray:
-    day = np.datetime64(int(np.floor(first)), "D")
-    if period in ("year", "month"):
-        unit = period[0].upper()
-        start = (day.astype(f"datetime64[{unit}]") + 1).astype("datetime64[D]")
-        stop = (start.astype(f"datetime64[{unit}]") + 1).astype("datetime64[D]")
-    else:
-        length = 7 if period == "week" else 1
-        monday = 4  # 1970-01-05
-        offset = (int(day.astype(np.int64)) - monday) % 7 if period == "week" else 0
-        start = day - offset
-        stop = start + length
-    low, high = float(start.astype(np.int64)), float(stop.astype(np.int64))
-    return np.linspace(low, high, GRID)
+def _combinations(each: Sequence[list[str]]) -> list[list[str]]:
+    combined: list[list[str]] = [[]]
+    for labels in each:
+        combined = [[*before, label] for before in combined for label in labels]
+    return combined
 
 
-def _quantity(estimate: Estimate) -> str:
+def _family(
+    estimate: Estimate,
+    axis: Axis,
+    apart: Sequence[Axis],
+    table: pd.DataFrame,
+    matrix: DesignMatrix,
+    level: float,
+) -> joints.Family:
+    design = estimate.design
+    labels = [" · ".join(p) for p in _combinations([a.labels(design.columns) for a in apart])]
+    x = along(axis)
+    order = np.argsort(x, kind="stable")
+    shape = (len(labels), len(x))
+    effects = table["effect"].to_numpy().reshape(shape)
+    weights = np.ones(len(labels))
+    if len(apart) == 1 and isinstance(apart[0].space, Levels):
+        space = apart[0].space
+        weights = space.shares[space.codes(apart[0].values)]
+    weights = weights / weights.sum()
+    deviation = effects - weights @ effects
+    error = np.full(shape, np.nan)
+    if not matrix.layout.parts or not matrix.wide.any():
+        dense = matrix.dense.reshape(*shape, -1)
+        about = (dense - np.einsum("c,cgd->gd", weights, dense)).reshape(shape[0] * shape[1], -1)
+        apart_too = replace(matrix, dense=about)
+        error = np.sqrt(np.maximum(estimate.posterior.variance(apart_too), 0.0)).reshape(shape)
+    half = quantile(estimate, level) * error
+    return joints.Family(
+        across=_scale(estimate, axis),
+        quantity=quantity(estimate),
+        x=x[order],
+        labels=tuple(labels),
+        effect=effects[:, order],
+        lower=table["lower"].to_numpy().reshape(shape)[:, order],
+        upper=table["upper"].to_numpy().reshape(shape)[:, order],
+        deviation=deviation[:, order],
+        deviation_lower=(deviation - half)[:, order],
+        deviation_upper=(deviation + half)[:, order],
+        level=level,
+    )
+
+
+def _surface(estimate: Estimate, running: Sequence[Axis], table: pd.DataFrame) -> joints.Surface:
+    """Over the first values of whatever else there is."""
+    x, y = (along(axis) for axis in running)
+    shape = (len(x), len(y))
+    first = table.iloc[: shape[0] * shape[1]]
+    masked = np.where(first["outside"], np.nan, first["effect"]).reshape(shape)
+    rows, columns = np.argsort(x, kind="stable"), np.argsort(y, kind="stable")
+    map_ = all(isinstance(axis.space, Scattered) for axis in running)
+    across, upward = (_scale(estimate, axis) for axis in running)
+    effects, errors = masked[rows][:, columns], first["std_error"].to_numpy().reshape(shape)
+    errors = errors[rows][:, columns]
+    if map_ and type(running[0].space).__name__ == "Globe":  # north upward
+        x, y, across, upward = y, x, upward, across
+        rows, columns, effects, errors = columns, rows, effects.T, errors.T
+    return joints.Surface(
+        across=across,
+        upward=upward,
+        quantity=quantity(estimate),
+        x=x[rows],
+        y=y[columns],
+        effect=effects,
+        std_error=errors,
+        map=map_,
+    )
+
+
+def quantity(estimate: Estimate) -> str:
+    """What an effect's axis says."""
     link = type(estimate.outcome.family.link).__name__
     scales = {"Identity": "", "Log": ", log scale", "Logit": ", log odds"}
     return f"Effect on {estimate.model.outcome.text}{scales.get(link, ', link scale')}"
 
 
-def _axis_label(space: object) -> str:
+def _scale(estimate: Estimate, axis: Axis) -> joints.Scale:
+    cyclic = isinstance(axis.space, Cycle)
+    dates = estimate.design.columns[axis.keys[0]].kind == "date" and not cyclic
+    period = axis.space.period if isinstance(axis.space, Cycle) else None
+    return joints.Scale(_axis_label(axis), dates, period)
+
+
+def _axis_label(axis: Axis) -> str:
+    space, key = axis.space, axis.keys[0]
     if isinstance(space, Cycle) and isinstance(space.period, str):
         part = {"day": "hour", "week": "day", "month": "day", "year": "time"}[space.period]
-        return f"{space.key}, {part} of the {space.period}"
-    return str(getattr(space, "key", ""))
+        return f"{key}, {part} of the {space.period}"
+    return key
 
 
-def _kind(space: object) -> Literal["curve", "cycle", "line", "levels"]:
-    if isinstance(space, Levels):
-        return "levels"
-    if isinstance(space, Line):
+def _kind(axis: Axis) -> Literal["curve", "cycle", "line"]:
+    if isinstance(axis.space, Line):
         return "line"
-    return "cycle" if isinstance(space, Cycle) else "curve"
-
-
-def _along(space: object, x: FloatArray) -> FloatArray:
-    """Position on the figure's axis: for a cycle within its period."""
-    if not isinstance(space, Cycle):
-        return x
-    t = space.scaled(x) % 1.0
-    if len(t) > 2 and t[-1] == t[0]:
-        t[-1] = 1.0  # the grid ends where it began
-    return t if isinstance(space.period, str) else t * space.period
-
-
-def _shown(x: FloatArray, kind: str, levels: tuple[str, ...], space: object) -> Any:
-    if kind == "levels":
-        return pd.Categorical.from_codes(x.astype(np.int64), categories=pd.Index(levels))
-    if kind == "date":
-        return np.datetime64(0, "us") + (x * 86_400e6).round().astype("timedelta64[us]")
-    return x
-
-
-def _given(column: Column, at: object) -> FloatArray:
-    """Values that the caller asks for, as the space takes them."""
-    listed: list[Any] = list(at) if isinstance(at, Iterable) and not isinstance(at, str) else [at]
-    if not listed:
-        raise ModelError(f"at= needs at least one value of {column.name}.")
-    if column.kind == "levels":
-        for label in listed:
-            if str(label) not in column.levels:
-                raise ModelError(
-                    f"at={label!r} is not a level of {column.name}. "
-                    f"{nearest(str(label), column.levels)}"
-                )
-        return np.array([column.levels.index(str(label)) for label in listed], dtype=np.float64)
-    try:
-        if column.kind == "date":
-            times = np.asarray(pd.to_datetime(listed), dtype="datetime64[us]")
-            days: FloatArray = (times - np.datetime64(0, "us")) / np.timedelta64(1, "D")
-            return days
-        values = np.asarray(listed, dtype=np.float64)
-    except (TypeError, ValueError) as error:
-        raise ModelError(f"at= needs values of {column.name}; got {at!r}.") from error
-    if not np.isfinite(values).all():
-        raise ModelError(f"at= needs finite values of {column.name}; got {at!r}.")
-    return values
+    return "cycle" if isinstance(axis.space, Cycle) else "curve"

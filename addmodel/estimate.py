@@ -6,28 +6,39 @@ parameters, ask whether the detail was enough, and go again with more where it w
 
 from __future__ import annotations
 
-from collections.abc import Callable
-from dataclasses import dataclass
+from collections.abc import Callable, Mapping
+from dataclasses import dataclass, replace
 from functools import cache
+from typing import Any
 
 import numpy as np
+import numpy.typing as npt
 from threadpoolctl import ThreadpoolController
 
 from addmodel import cautions
-from addmodel.component import Design
+from addmodel.assembly import ALL_PAIRS, assemble, resized
+from addmodel.component import Block, Component, Seen, cross, gammas_of, most_functions
 from addmodel.data import Table
+from addmodel.design import Design
 from addmodel.errors import ModelError
 from addmodel.formula import Model
-from addmodel.laid import Laid, null_predictor, quasi_scale, row_weights, with_best_dispersion
+from addmodel.laid import Laid, null_predictor, quasi_scale, with_best_dispersion
 from addmodel.outcomes import Outcome
 from addmodel.outcomes.likelihood import Likelihood
+from addmodel.posterior import Posterior
 from addmodel.solve.criteria import Criterion
-from addmodel.solve.detail import CEILING, SHRUNK, wanted
+from addmodel.solve.detail import CEILING, GROWTH, enough, left_over, left_over_functions
+from addmodel.solve.quadratic import Solution
 from addmodel.solve.smoothness import Smoothness
 from addmodel.solve.uncertainty import smoothing_spread
 from addmodel.spaces.base import FloatArray, Penalised
+from addmodel.spaces.spline import Spline
 
 ROUNDS = 16
+MOST_ROWS = 20_000
+"""So many rows are enough to look for what is left over of a surface."""
+WIDEST = 400
+"""So many columns at most are looked at for it."""
 Progress = Callable[[str], None]
 
 
@@ -56,9 +67,11 @@ class Estimate:
     outcome: Outcome
     criterion: str
     coefficients: FloatArray  # (P,)
-    covariance: FloatArray  # (P, P) posterior: σ² A⁻¹ (Wahba 1983, J. R. Stat. Soc. B 45)
+    posterior: Posterior  # φA⁻¹ (Wahba 1983, J. R. Stat. Soc. B 45)
     column_df: FloatArray  # (P,) diag(A⁻¹X'WX) with Fisher weights
     smoothing_spread: FloatArray  # (P, k) times its transpose: what uncertain smoothing adds to it
+    spread_df: float
+    """What that adds to the effective degrees of freedom."""
     smoothing_root: FloatArray  # (blocks, k) times its transpose: the covariance of log λ
     shares: FloatArray  # (components,) cov(f_j, η)/var(η) in the prior weights
     smoothing: FloatArray  # (blocks,) λ, may be infinite
@@ -153,9 +166,9 @@ def _search(
     model: Model, table: Table, outcome: Outcome, criterion: Criterion, progress: Progress
 ) -> Found:
     """Lay, choose smoothness, and go again while scale or detail are not what they should be."""
-    weights = row_weights(table)
+    weights = table.prior
     progress("laying the components on the data")
-    design = Design.lay(model, table)
+    design = assemble(model, table)
     scale, steps = 1.0, 0
     for _ in range(ROUNDS):
         progress(f"choosing smoothness ({sum(design.block_sizes)} functions)")
@@ -180,9 +193,12 @@ def _search(
             before, scale = scale, quasi_scale(outcome, table, eta, smoothness.point)
             if abs(np.log(scale / before)) > 1e-4:
                 continue
-        if sizes == [c.spaces[0].size for c in design.components]:
+        before_sizes = [len(b.functions) for b in design.blocks]
+        if sizes == before_sizes:
             break
-        design = design.resized(sizes, table)
+        design = resized(design, sizes, model, table)
+        if [len(b.functions) for b in design.blocks] == before_sizes:
+            break
     return found
 
 
@@ -192,25 +208,25 @@ def _estimate(
     """What was found, with what the rows alone can tell of it."""
     laid, outcome, point = found.laid, found.outcome, found.smoothness.point
     design, rows = laid.design, laid.modes.rows
-    beta, eta, weights = found.coefficients, found.linear_predictor, row_weights(table)
+    beta, eta, weights = found.coefficients, found.linear_predictor, table.prior
     scale, likelihood = criterion.scale(point), point.problem.likelihood
     deviance = point.deviance if outcome.plain else rows.deviance(beta, outcome)
     fisher = laid.modes.quadratic(beta, fisher=True).at(point.smoothing)
-    gram = fisher.problem.sums.gram
     pearson = outcome.pearson(table.outcome, outcome.mean(eta), weights)
     dispersion = pearson / max(likelihood.n - fisher.effective_df, 1.0)
-    owners = [design.components[j] for j in design.block_owners]
-    free = [j for j, c in enumerate(owners) if c.smoothing is None and c.df is None]
-    spread, root = smoothing_spread(point, criterion, free)
+    spread, root = smoothing_spread(point, criterion, laid.free_blocks.tolist())
     return Estimate(
         model=model,
         design=design,
         outcome=outcome,
         criterion=criterion.name,
         coefficients=beta,
-        covariance=scale * point.covariance(),
-        column_df=np.einsum("ij,ji->i", fisher.covariance(), gram),
+        posterior=point.posterior().scaled(scale),
+        column_df=np.concatenate(
+            [np.ones(design.p), *(1 - fisher.shrinkage(k) for k in range(len(design.blocks)))]
+        ),
         smoothing_spread=spread,
+        spread_df=_spread_df(fisher, spread, scale),
         smoothing_root=root,
         shares=_shares(laid, beta, weights),
         smoothing=point.smoothing,
@@ -241,6 +257,12 @@ def _estimate(
     )
 
 
+def _spread_df(fisher: Solution, spread: FloatArray, scale: float) -> float:
+    """tr(V'X'WX)/φ, V' = spread · spread'."""
+    sums = fisher.problem.sums
+    return sum(float(s @ sums.gram.times(s, sums.layout)) for s in spread.T) / scale
+
+
 def _sizes(
     design: Design,
     smoothness: Smoothness,
@@ -249,29 +271,74 @@ def _sizes(
     weights: FloatArray,
     scale: float,
 ) -> tuple[list[int], list[bool]]:
-    """The detail each component should have, and whether what it has was confirmed."""
-    point = smoothness.point
-    shrinkage = np.ones(sum(design.block_sizes))
-    shrinkage[point.index] = point.shrinkage
-    places = iter(point.problem.slices)
-    sizes, confirmed = [], []
-    for component in design.components:
-        (space,) = component.spaces
-        if not isinstance(space, Penalised):
-            sizes.append(0)
-            confirmed.append(True)
+    """The functions each block should have, and for each component whether its detail is enough."""
+    values = {key: column.values for key, column in table.columns.items()}
+    sizes = []
+    confirmed = [True] * design.count
+    for k, (owner, block) in enumerate(design.owned_blocks):
+        component, size = design.components[owner], len(block.functions)
+        if not block.bends:
+            sizes.append(size)
             continue
-        place = next(places)
-        size = space.size
-        if not component.everything and scale > 0:
-            x = table.columns[space.key].values
-            size = wanted(space, shrinkage[place], x, residuals, weights, scale)
-        sizes.append(size)
-        everything = space.size == space.distinct - 1 - len(space.unpenalised_names)
-        tail = shrinkage[place][-max(1, space.size // 10) :]
-        enough = size == space.size < CEILING and bool(tail.min() >= SHRUNK)
-        confirmed.append(everything or enough)
+        ceiling = ALL_PAIRS if block.everything else CEILING
+        possible = most_functions(block, component.spaces)
+        most = size if block.everything else min(possible, max(ceiling, size))
+        new: int | None = None
+        if size < most and scale > 0:
+            shrunk = smoothness.point.shrinkage(k)
+            levels = design.levels_apart if block.apart else 1
+            by_function = shrunk.reshape(levels, size, block.width).min(axis=(0, 2))
+            growth = min(_growth(component, factor) for factor in block.bends)
+            new = enough(by_function, growth)
+            if new is None:
+                new = _left_over(component, block, values, residuals, weights, scale)
+        sizes.append(size if new is None else min(most, new))
+        unbound = all(_uncapped(component, factor) for factor in block.bends)
+        confirmed[owner] &= (size >= possible and unbound) or (size < most and new is None)
     return sizes, confirmed
+
+
+def _growth(component: Component, factor: int) -> float:
+    space = component.spaces[factor]
+    return space.growth if isinstance(space, Penalised) else 4.0
+
+
+def _uncapped(component: Component, factor: int) -> bool:
+    """Whether all that the distinct points allow is all there is: no `detail=`, no lack of knots."""
+    space = component.spaces[factor]
+    return not isinstance(space, Penalised) or (
+        space.most == space.distinct - 1 - len(space.unpenalised_names)
+    )
+
+
+def _left_over(
+    component: Component,
+    block: Block,
+    values: Mapping[str, npt.NDArray[Any]],
+    residuals: FloatArray,
+    weights: FloatArray,
+    scale: float,
+) -> int | None:
+    """A larger number of functions, where the residuals hold what those left out could take."""
+    size = len(block.functions)
+    space = component.single
+    if isinstance(space, Spline):
+        return left_over(space, size, values[space.key], residuals, weights, scale)
+    if block.apart:
+        return None
+    more = cross(gammas_of(block, component.spaces), min(int(GROWTH**2 * size) + 1, 2 * CEILING))
+    room = max(WIDEST // block.width, 1)
+    more = more[size : size + room]
+    if not len(more):
+        return None
+    some = slice(None, None, -(-len(residuals) // MOST_ROWS))
+    seen = Seen({key: x[some] for key, x in values.items()}, len(residuals[some]))
+    kept = component.columns(block, seen)
+    omitted = replace(block, functions=more, means=np.zeros(1))
+    hit = left_over_functions(
+        kept, component.columns(omitted, seen), residuals[some], weights[some], scale, 2
+    )
+    return int(np.ceil(GROWTH * size)) if hit else None
 
 
 def _check_outcome(table: Table, outcome: Outcome) -> None:
@@ -288,7 +355,7 @@ def _check_outcome(table: Table, outcome: Outcome) -> None:
 def _null_deviance(table: Table, outcome: Outcome) -> float:
     """Deviance of the model with the offset and one constant."""
     mean = outcome.mean(table.offset + null_predictor(table, outcome))
-    return outcome.deviance(table.outcome, mean, row_weights(table))
+    return outcome.deviance(table.outcome, mean, table.prior)
 
 
 def _log_likelihood(likelihood: Likelihood, deviance: float, scale: float) -> float:

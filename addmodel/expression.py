@@ -28,7 +28,14 @@ NAME = r"[^\W\d](?:\w|[^\x00-\x7f\s])*"
 _STRING = r"'(?:\\.|[^'\\])*'|\"(?:\\.|[^\"\\])*\""
 _OPAQUE = re.compile(rf"{_STRING}|`[^`]*`|\s|#|[(\[{{]|[)\]}}]")
 
-_TERMS = ("curve", "cycle", "C")  # calls that a formula reads as terms; no expression holds one
+_TERMS = (
+    "curve",
+    "cycle",
+    "place",
+    "globe",
+    "group",
+    "C",
+)  # calls that a formula reads as terms; no expression holds one
 _FUNCTIONS: dict[str, np.ufunc] = {
     **{"log": np.log, "log2": np.log2, "log10": np.log10, "log1p": np.log1p, "sqrt": np.sqrt},
     **{"exp": np.exp, "expm1": np.expm1, "abs": np.absolute, "sin": np.sin, "cos": np.cos},
@@ -47,8 +54,8 @@ _ALLOWED = (
     + "."
 )
 _NO_CALL = (
-    "{}() is not something a formula can call. Write curve(x), cycle(x, period=...) or C(x) "
-    f"for a term. {_ALLOWED}"
+    "{}() is not something a formula can call. A term is one of curve(x), "
+    f"cycle(x, period=...), place(u, v), globe(lat, lon), group(g) and C(x). {_ALLOWED}"
 )
 _NUMBERS = ("integer", "floating", "mixed-integer-float", "decimal", "boolean")  # in objects
 

@@ -8,41 +8,44 @@ of the data; levels are rows with their share of the data in the margin. Nothing
 from __future__ import annotations
 
 import importlib
-import textwrap
-from collections.abc import Iterator, Sequence
-from contextlib import contextmanager
+from collections.abc import Sequence
 from dataclasses import dataclass, field, replace
 from pathlib import Path
 from typing import TYPE_CHECKING, Any, Literal, cast
 
 import numpy as np
-import numpy.typing as npt
 
+from addmodel import joints
 from addmodel.files import replacing
+from addmodel.looks import (
+    CALENDAR,
+    DEEP,
+    EARTH,
+    FAINT,
+    HAIR,
+    INK,
+    LABEL,
+    LINE,
+    MM,
+    NOTE,
+    PALE,
+    ROW,
+    SAND,
+    SIZE,
+    SMALL,
+    STEPS,
+    STRIP,
+    TINT,
+    FloatArray,
+    Limits,
+    blank,
+    look,
+    wrapped,
+)
 
 if TYPE_CHECKING:  # matplotlib is slow to import, and needed for drawing alone
     from matplotlib.axes import Axes
     from matplotlib.figure import Figure
-
-FloatArray = npt.NDArray[np.float64]
-Limits = tuple[float, float]
-MM = 72 / 25.4  # a millimetre in points
-SIZE, ROW, SMALL = 8.0, 7.5, 6.5  # letters in points: labels, names of levels, notes
-LINE = 1.35 * SMALL / MM  # height of a line of a note, in millimetres
-DEEP, TINT, PALE = "#0B4A50", "#9ACBC8", "#D9EBE9"
-EARTH, SAND = (0.42, 0.24, 0.03), "#B59A73"  # of the data; beside blue-green safe to tell apart
-INK, FAINT, HAIR = "#333333", "#707070", "#E6E6E6"
-LABEL: dict[str, Any] = {"fontsize": SIZE, "color": INK, "parse_math": False, "labelpad": 3}
-NOTE: dict[str, Any] = {"fontsize": SMALL, "color": FAINT, "linespacing": 1.15, "parse_math": False}
-STRIP = 0.04  # height of the strip as a fraction of the panel's
-STEPS = {7.0: 1.0, 12.0: 3.0, 24.0: 6.0, 52.0: 13.0, 60.0: 15.0, 180.0: 45.0, 360.0: 90.0}
-MONTHS = np.cumsum([0, 31, 28, 31, 30, 31, 30, 31, 31, 30, 31, 30, 31]) / 365
-CALENDAR = {  # positions and names of ticks; in STEPS, distances of ticks for some periods
-    "year": (MONTHS, "Jan Feb Mar Apr May Jun Jul Aug Sep Oct Nov Dec Jan"),
-    "month": (np.array([0, 7, 14, 21, 28]) / 30.44, "1 8 15 22 29"),
-    "week": (np.arange(8) / 7, "Mon Tue Wed Thu Fri Sat Sun Mon"),
-    "day": (np.arange(5) / 4, "0 6 12 18 24"),
-}
 
 
 @dataclass(frozen=True)
@@ -53,7 +56,7 @@ class Panel:
     position within the period, 0..period (0..1 if the period is "year", "month", "week" or "day").
     """
 
-    kind: Literal["curve", "cycle", "line", "levels"]
+    kind: Literal["curve", "cycle", "line", "levels", "ranked"]
     covariate: str  # label of its axis, with the unit
     quantity: str  # label of the effect's axis
     x: FloatArray
@@ -75,52 +78,69 @@ class Panel:
             raise ValueError(f"{self.covariate}: the panel's arrays are not of one length.")
 
 
-def draw(panel: Panel, ax: Axes | None = None, ylim: Limits | None = None) -> Axes:
+AnyPanel = Panel | joints.Surface | joints.Family
+
+
+def draw(panel: AnyPanel, ax: Axes | None = None, ylim: Limits | None = None) -> Axes:
     """Draw a panel on `ax`, or on the axes of a new figure 90 mm wide.
 
     `ylim` limits the effect's axis; the default shows the effect, and the band where the data are.
+    Pictures of two covariates have two fields and take a new figure of their own, 180 mm wide.
     """
-    with _look():
+    if not isinstance(panel, Panel):
+        if ax is not None:
+            raise ValueError("a picture of two covariates has two fields: leave ax= out.")
+        return sheet([panel]).axes[0]
+    with look():
         if ax is None:
-            ax = _blank(90.0, _height(panel, 90.0)).add_subplot()
+            ax = blank(90.0, _height(panel, 90.0)).add_subplot()
         box = ax.get_window_extent()  # three quarters or so of the room with the labels
         scale = 25.4 / float(ax.figure.dpi) / 0.75
         _paint(panel, ax, ylim or _limits([panel]), box.width * scale, box.height * scale)
     return ax
 
 
-def single(panel: Panel, width: float = 90.0) -> Figure:
-    """One panel without its caption, as a figure `width` millimetres wide."""
-    return sheet([replace(panel, caption="")], width)
+def single(panel: AnyPanel, width: float | None = None) -> Figure:
+    """One panel without its caption; 90 mm wide, with two covariates 180 mm, unless told."""
+    usual = 90.0 if isinstance(panel, Panel) else 180.0
+    return sheet([replace(panel, caption="")], width or usual)
 
 
-def sheet(panels: Sequence[Panel], width: float = 180.0) -> Figure:
-    """All panels on one figure, `width` millimetres wide; `figure.axes` are in the panels' order.
+def sheet(every: Sequence[AnyPanel], width: float = 180.0) -> Figure:
+    """All panels on one figure, `width` millimetres wide.
 
-    Panels of the same quantity have the same scale. Numbers stand in a raster; levels, whose
-    heights differ, in columns below it. ValueError if there are no panels.
+    Panels of the same quantity have the same scale. Numbers stand in a raster; below it pictures of
+    two covariates, each with two fields, then levels, whose heights differ, in columns.
+    `figure.axes` are in that order, numbers and levels as given, then the fields. ValueError if
+    there are no panels.
     """
-    if not panels:
+    if not every:
         raise ValueError("a sheet needs at least one panel.")
+    panels = [panel for panel in every if isinstance(panel, Panel)]
+    double = [panel for panel in every if not isinstance(panel, Panel)]
     levels = [i for i, panel in enumerate(panels) if panel.kind == "levels"]
     numbers = [i for i, panel in enumerate(panels) if panel.kind != "levels"]
     narrowest = 85.0 if len(numbers) in (1, 2, 4) else 58.0 if len(numbers) <= 18 else 44.0
     across = max(1, min(len(numbers), int(width // narrowest)))
     stacks: list[list[int]] = [[] for _ in range(max(1, min(len(levels), int(width // 85.0))))]
     cells = [width / (len(stacks) if p.kind == "levels" else across) for p in panels]
-    captions = [_wrapped(p.caption, 0.7 * c, SMALL) for p, c in zip(panels, cells, strict=True)]
+    captions = [wrapped(p.caption, 0.7 * c, SMALL) for p, c in zip(panels, cells, strict=True)]
     below = LINE * max(map(len, captions))
     heights = [_height(p, c) + below for p, c in zip(panels, cells, strict=True)]
     for i in levels:
         min(stacks, key=lambda stack: sum(heights[j] for j in stack)).append(i)
     blocks = [(each, wide) for each, wide in (([numbers], across), (stacks, 1)) if each[0]]
     totals = [max(sum(heights[i] for i in s[::wide]) for s in each) for each, wide in blocks]
-    key = _wrapped(_key(panels), 0.97 * width, SMALL)
-    with _look():
-        figure = _blank(width, sum(totals) + LINE * len(key) + 2.0)
+    notes = [wrapped(panel.caption, 0.9 * width, SMALL) for panel in double]
+    tall = [joints.height(p, width) + LINE * len(n) for p, n in zip(double, notes, strict=True)]
+    key = wrapped(_key(panels, double), 0.97 * width, SMALL)
+    with look():
+        figure = blank(width, sum(totals) + sum(tall) + LINE * len(key) + 2.0)
         places = {}
-        rooms: Any = figure.subfigures(len(blocks), 1, height_ratios=totals)
-        for room, total, (each, wide) in zip(np.ravel(rooms), totals, blocks, strict=True):
+        ratios = [*totals[: len(blocks)], *tall]
+        every_room = np.ravel(figure.subfigures(len(ratios), 1, height_ratios=ratios))
+        rooms = every_room[: len(blocks)]
+        for room, total, (each, wide) in zip(rooms, totals, blocks, strict=True):
             for host, stack in zip(np.ravel(room.subfigures(1, len(each))), each, strict=True):
                 rows = [heights[i] for i in stack[::wide]]
                 rows += [total - sum(rows)] if total - sum(rows) > 1.0 else []
@@ -136,6 +156,11 @@ def sheet(panels: Sequence[Panel], width: float = 180.0) -> Figure:
         for k, i in enumerate(numbers):  # the quantity is said once in a row
             if k % across and panels[i].quantity == panels[numbers[k - 1]].quantity:
                 figure.axes[i].yaxis.label.set_visible(False)
+        for panel, note, room in zip(double, notes, every_room[len(blocks) :], strict=True):
+            left, right = room.subplots(1, 2)
+            joints.paint(panel, left, right, width)
+            if note:
+                room.supxlabel("\n".join(note), x=0.02, ha="left", **NOTE)
         figure.supxlabel("\n".join(key), x=2 / width, ha="left", **NOTE)
     return figure
 
@@ -145,7 +170,7 @@ def save(figure: Figure, stem: Path) -> list[Path]:
     written = []
     for ending, metadata in (("png", {}), ("pdf", {"CreationDate": None})):
         path = stem.with_name(f"{stem.name}.{ending}")  # a stem may contain dots
-        with replacing(path) as temporary, _look():
+        with replacing(path) as temporary, look():
             figure.savefig(temporary, format=ending, dpi=200, metadata=metadata)
         written.append(path)
     return written
@@ -169,23 +194,6 @@ def density(panel: Panel, low: float, high: float, bins: int = 256) -> FloatArra
     return np.asarray(smooth / (smooth + typical), dtype=np.float64)
 
 
-@contextmanager
-def _look() -> Iterator[None]:
-    """Our settings, whatever the user's are; the user's font stands in for letters ours lacks."""
-    from matplotlib import rcParams, style
-
-    theirs = {*rcParams["font.family"], *rcParams["font.sans-serif"][:1]}
-    family = ["DejaVu Sans", *sorted(theirs - {"DejaVu Sans", "sans-serif"})]
-    with style.context(["default", {"font.family": family, "pdf.fonttype": 42}]):
-        yield
-
-
-def _blank(width: float, height: float) -> Figure:
-    from matplotlib.figure import Figure
-
-    return Figure(figsize=(width / 25.4, height / 25.4), layout="constrained")
-
-
 def _paint(panel: Panel, ax: Axes, limits: Limits, width: float, height: float) -> None:
     """Draw a panel that has width by height millimetres for itself and its labels."""
     ax.spines[:].set_visible(False)
@@ -193,13 +201,16 @@ def _paint(panel: Panel, ax: Axes, limits: Limits, width: float, height: float) 
     ax.tick_params(labelsize=SIZE, labelcolor=INK, labelfontfamily=ax.xaxis.label.get_fontfamily())
     ax.tick_params(axis="y", length=0)
     levels = panel.kind == "levels"
-    (_paint_levels if levels else _paint_number)(panel, ax, limits, width)
+    if panel.kind == "ranked":
+        _paint_ranked(panel, ax, limits)
+    else:
+        (_paint_levels if levels else _paint_number)(panel, ax, limits, width)
     across, upward = (panel.covariate, panel.quantity)[:: -1 if levels else 1]
     room = (
         0.5 if panel.dates else 0.62 if levels else 0.75
     ) * width  # the line of dates has a year
-    ax.set_xlabel("\n".join(_wrapped(across, room, SIZE)), loc="left", **LABEL)
-    ax.set_ylabel("\n".join(_wrapped(upward, 0.75 * height, SIZE)), **LABEL)
+    ax.set_xlabel("\n".join(wrapped(across, room, SIZE)), loc="left", **LABEL)
+    ax.set_ylabel("\n".join(wrapped(upward, 0.75 * height, SIZE)), **LABEL)
 
 
 def _paint_number(panel: Panel, ax: Axes, limits: Limits, width: float) -> None:
@@ -229,6 +240,18 @@ def _paint_number(panel: Panel, ax: Axes, limits: Limits, width: float) -> None:
         strip.set(transform=ax.get_xaxis_transform(), extent=(*ends, 0.0, STRIP))
     ax.axhline(0.0, color=FAINT, linewidth=0.6, zorder=2.0)
     ax.plot(x + shift, effect, color=DEEP, linewidth=1.6, solid_capstyle="butt", zorder=3.0)
+
+
+def _paint_ranked(panel: Panel, ax: Axes, limits: Limits) -> None:
+    """Many groups, lowest effect first, each with its interval."""
+    ax.set(xlim=(-1, len(panel.x)), ylim=limits, axisbelow=True)
+    ax.grid(axis="y", color=HAIR, linewidth=0.5)
+    ax.axhline(0.0, color=FAINT, linewidth=0.6, zorder=2.0)
+    # Of very many groups evenly chosen ranks: bars side by side would be one grey.
+    some = np.unique(np.linspace(0, len(panel.x) - 1, min(len(panel.x), 300)).astype(int))
+    ax.vlines(panel.x[some], panel.lower[some], panel.upper[some], color=TINT, linewidth=0.8)
+    ax.plot(panel.x, panel.effect, color=DEEP, linewidth=1.2, zorder=3.0)
+    ax.set_xticks([0, len(panel.x) - 1], ["lowest", f"highest of {len(panel.x):,}"])
 
 
 def _ticks(panel: Panel, ax: Axes, width: float) -> float:
@@ -281,7 +304,7 @@ def _paint_levels(panel: Panel, ax: Axes, limits: Limits, width: float) -> None:
 
 def _level_labels(panel: Panel, width: float) -> list[str]:
     """Labels in lines that fit a panel `width` mm wide; very long ones lose their middle."""
-    wrapped = [_wrapped(label, 0.36 * width, ROW) for label in panel.labels]
+    wrapped = [wrapped(label, 0.36 * width, ROW) for label in panel.labels]
     return ["\n".join(w if len(w) <= 3 else [*w[:2], "… " + w[-1]]) for w in wrapped]
 
 
@@ -295,7 +318,7 @@ def _height(panel: Panel, width: float) -> float:
 
 def _core(panel: Panel) -> Limits | None:
     """Where the central 98 % of the data are; None where there are no sparse ends to tell apart."""
-    if panel.kind == "cycle" or not len(panel.quantiles):
+    if panel.kind in ("cycle", "ranked") or not len(panel.quantiles):
         return None
     ends = np.clip(np.quantile(panel.quantiles, [0.01, 0.99]), panel.x[0], panel.x[-1])
     return (float(ends[0]), float(ends[1])) if ends[0] < ends[1] else None
@@ -310,7 +333,7 @@ def _limits(panels: Sequence[Panel]) -> Limits:
     lows, highs = [], []
     for panel in panels:
         effect, lower, upper = panel.effect, panel.lower, panel.upper
-        if panel.kind != "levels":
+        if panel.kind not in ("levels", "ranked"):
             start, stop = _core(panel) or (panel.x[0], panel.x[-1])
             at = np.linspace(start, stop, 200)
             effect, lower, upper = (np.interp(at, panel.x, v) for v in (effect, lower, upper))
@@ -327,21 +350,22 @@ def _limits(panels: Sequence[Panel]) -> Limits:
     return bottom - 0.11 * span, top + 0.05 * span
 
 
-def _key(panels: Sequence[Panel]) -> str:
+def _key(panels: Sequence[Panel], double: Sequence[joints.Picture]) -> str:
     """What the tints, strips and bars are, for the kinds of panel there are."""
-    level = " or ".join(f"{100 * each:g} %" for each in sorted({p.level for p in panels}))
+    families = [p for p in double if isinstance(p, joints.Family)]
+    levels = sorted({p.level for p in [*panels, *families]})
+    level = " or ".join(f"{100 * each:g} %" for each in levels)
     pale = ", paler outside the central 98 % of the data" if any(map(_core, panels)) else ""
     parts = [
-        any(p.kind != "levels" for p in panels)
+        any(p.kind not in ("levels", "ranked") for p in panels)
         * f"Band: {level} at each point{pale}; it may run past the edge. Zero: the data's average.",
         any(len(p.quantiles) for p in panels) * "Strip: the darker, the more data.",
         any(p.kind == "levels" for p in panels) * f"Bars of levels: {level} interval.",
         any(len(p.shares) for p in panels) * "Margin: share of the data.",
+        any(p.kind == "ranked" for p in panels)
+        * f"Groups: lines are {level} intervals, of at most 300 of them.",
+        bool(families) * f"Curves by level: {level} bands at each point.",
+        any(isinstance(p, joints.Surface) for p in double)
+        * "Surfaces: left white where no data are near.",
     ]
     return " ".join(filter(None, parts))
-
-
-def _wrapped(text: str, width: float, size: float) -> list[str]:
-    """Lines no wider than `width` mm in letters of `size` points, by the letters' usual widths."""
-    letter = np.mean([1.0 if c > "\u2e7f" else 0.58 + 0.1 * c.isupper() for c in text or " "])
-    return textwrap.wrap(text, max(6, int(width * MM / size / letter)))

@@ -13,7 +13,7 @@ import pandas as pd
 
 from addmodel import figures, store
 from addmodel.data import read
-from addmodel.effects import Effect, effect
+from addmodel.effects import Effect, effect, effect_to_draw
 from addmodel.errors import Caution, ModelError, nearest
 from addmodel.estimate import Estimate, Progress, estimate
 from addmodel.formula import parse
@@ -57,9 +57,12 @@ def fit(
     formula : str
         For example ``"y ~ curve(x) + cycle(hour, period=24) + site"``. A number stands for a
         straight line, text and categories for levels, ``C(x)`` makes levels of a number,
-        ``curve(x)`` is a cubic smoothing spline and ``cycle(x, period=)`` a periodic one. Options
-        of curve and cycle: ``detail=`` (most functions, or "all"), ``smoothing=`` (fixes the
-        smoothing parameter), ``df=`` (fixes the effective degrees of freedom).
+        ``curve(x)`` is a cubic smoothing spline and ``cycle(x, period=)`` a periodic one,
+        ``place(u, v)`` a map in plane coordinates, ``globe(lat, lon)`` one in degrees,
+        ``group(g)`` exchangeable levels. Products: ``a:b``, ``a*b``. Options: ``detail=`` (most
+        functions, or "all"), ``smoothing=`` (fixes the smoothing parameter), ``df=`` (fixes the
+        effective degrees of freedom), the last two for a term that is no product; of curve also
+        ``order=`` (1 to 3: the derivative that is penalised).
     data : table, mapping or path
         A pandas, polars or arrow table, a mapping of names to arrays of equal length, or the path
         of a CSV or Parquet file.
@@ -115,6 +118,11 @@ def fit(
             "estimated. Write criterion='gcv' or 'reml'."
         )
     model = parse(formula)
+    if criterion != "reml" and any(f.kind == "group" for t in model.terms for f in t.factors):
+        raise ModelError(
+            "Groups are exchangeable levels, whose variance is a matter of likelihood: leave "
+            f"criterion={criterion!r} out."
+        )
     rows = {
         "weights": weights,
         "counts": counts,
@@ -291,6 +299,7 @@ class Fit:
         without: str | Sequence[str] | None = None,
         per: float | None = None,
         unseen: Literal["error", "base", "average"] = "error",
+        groups: Literal["own", "zero", "average"] = "own",
         missing: Literal["keep", "error"] = "keep",
     ) -> FloatArray | pd.DataFrame:
         """Predict the mean at new rows.
@@ -311,6 +320,10 @@ class Fit:
         unseen : {"error", "base", "average"}
             What a level stands for that the fit has not seen: an error, the base level, or the
             average over the data (its interval is then as wide as levels differ).
+        groups : {"own", "zero", "average"}
+            Each row's own group (one that the fit has not seen stands at the middle of the groups),
+            the middle for all, or the mean over the groups' distribution: on a log link the middle
+            is a median, too low for a mean by exp(variance/2).
         per : float, optional
             For a fit with exposure: predict per so much of it; otherwise the new rows must have
             the column.
@@ -335,6 +348,7 @@ class Fit:
             without=without,
             per=per,
             unseen=unseen,
+            groups=groups,
             missing=missing,
         )
 
@@ -344,9 +358,12 @@ class Fit:
         Parameters
         ----------
         component : str
-            Its name, as in `components`; "cycle(hour)" finds "cycle(hour, period=24)".
-        at : sequence, optional
-            Values of the covariate; by default evenly over the data, or every level.
+            Its name, as in `components`; "cycle(hour)" finds "cycle(hour, period=24)". Or a sum of
+            components: "curve(x)*curve(z)" is the joint surface.
+        at : sequence or mapping, optional
+            Values of the covariate, or of several by their names; by default evenly over the data,
+            or every level. Of more than two numbers the others are held at their median, of a
+            straight line beside a curve at its 10, 50 and 90 % points.
         level : float
             Level of the band.
         """
@@ -354,10 +371,10 @@ class Fit:
 
     def plot(self) -> Figure:
         """A sheet of all components' effects, on one scale."""
-        names = [c.name for c in self.estimate.design.components]
-        if not names:
+        design = self.estimate.design
+        if not design.count:
             raise ModelError("The model has no components to draw.")
-        return figures.sheet([self.effect(name).panel for name in names])
+        return figures.sheet([effect_to_draw(self.estimate, j).panel for j in range(design.count)])
 
     def columns(self, new: object) -> pd.DataFrame:
         """The model's columns at new rows, (n, P); columns @ coefficients = linear predictor.

@@ -22,7 +22,7 @@ from .errors import FormulaError, nearest
 from .expression import DEEPEST, NAME, Expression, SourceText, span_of
 
 Option = float | int | str
-Kind = Literal["plain", "levels", "curve", "cycle"]
+Kind = Literal["plain", "levels", "curve", "cycle", "place", "globe", "group"]
 
 _MOST_TERMS, _MOST_FACTORS = 1_000, 20
 _BRACES = "Arithmetic stands in braces, as in {}."
@@ -50,15 +50,32 @@ _PERIOD = _Rule(
     _above(0, "year", "month", "week", "day"),
 )
 _BASE = _Rule('a level, or "largest"', lambda v: True, lambda v: v)
+_ORDER = _Rule("1, 2 or 3: the derivative whose square is penalised", lambda v: v in (1, 2, 3), int)
+_DF = _Rule("a number above 1", _above(1))
 _TUNING = {"detail": _DETAIL, "smoothing": _SMOOTHING}
 
-_CALLS: dict[str, tuple[Kind, dict[str, _Rule]]] = {
-    "curve": ("curve", {**_TUNING, "df": _Rule("a number above 1", _above(1))}),
-    "cycle": ("cycle", {"period": _PERIOD, **_TUNING, "df": _SMOOTHING}),
-    "C": ("levels", {"base": _BASE}),
+
+class _Call(NamedTuple):
+    kind: Kind
+    arguments: str  # what it takes, in words
+    fewest: int
+    most: int
+    rules: dict[str, _Rule]
+
+
+_ONE = "one column or expression"
+_CALLS: dict[str, _Call] = {
+    "curve": _Call("curve", _ONE, 1, 1, {"order": _ORDER, **_TUNING, "df": _DF}),
+    "cycle": _Call("cycle", _ONE, 1, 1, {"period": _PERIOD, **_TUNING, "df": _SMOOTHING}),
+    "place": _Call("place", "two coordinates of one unit", 2, 2, {**_TUNING, "df": _DF}),
+    "globe": _Call(
+        "globe", "latitude and longitude in degrees", 2, 2, {**_TUNING, "df": _SMOOTHING}
+    ),
+    "group": _Call("group", "one column or more", 1, 8, {"smoothing": _SMOOTHING}),
+    "C": _Call("levels", _ONE, 1, 1, {"base": _BASE}),
 }
 # These change what a term means, not only how closely it is fitted: they are part of its name.
-_NAMING = ("period", "base")
+_NAMING = ("period", "base", "order")
 
 
 @dataclass(frozen=True)
@@ -67,7 +84,7 @@ class Factor:
 
     Attributes
     ----------
-    kind : {"plain", "levels", "curve", "cycle"}
+    kind : {"plain", "levels", "curve", "cycle", "place", "globe", "group"}
         ``plain`` is a straight line or levels, as the data decide.
     arguments : tuple of Expression
     settings : tuple of (str, value)
@@ -148,10 +165,6 @@ def parse(text: str) -> Model:
     if outcome.kind != "plain":
         raise source.error("The outcome is a column or an expression, not a term.", whole)
     terms = _terms(source, right, strict=True)
-    for term in terms:
-        if len(term.factors) > 1:
-            message = f"{term.name}: products of terms are not available yet in this version."
-            raise source.error(message, term.span)
     return Model(text, outcome.arguments[0], terms)
 
 
@@ -188,6 +201,37 @@ def find(text: str, names: Sequence[str]) -> str:
     if fits:
         raise FormulaError(f"'{text}' may be any of {', '.join(fits)}. Write one of them in full.")
     raise FormulaError(f"The model has no term '{text}'. {nearest(str(text), names)}")
+
+
+def find_sum(text: str, names: Sequence[str]) -> list[str]:
+    """Resolve the name of a term, or of a sum of terms such as "curve(x)*curve(z)".
+
+    Parameters
+    ----------
+    text : str
+    names : sequence of str
+
+    Returns
+    -------
+    list of str
+        Each once, in the order of `names`.
+
+    Raises
+    ------
+    FormulaError
+        If one of them fits none of the names, or several.
+    """
+    if text in names:
+        return [text]
+    try:
+        source = SourceText.of(text, "term")
+        terms = _terms(source, _scan(source), strict=False)
+    except FormulaError:
+        terms = ()
+    if len(terms) < 2:
+        return [find(text, names)]
+    found = {find(term.name, names) for term in terms}
+    return [name for name in names if name in found]
 
 
 def _lone_term(text: str) -> Term | None:
@@ -383,12 +427,12 @@ def _factor(source: SourceText, piece: _Piece, strict: bool) -> Factor:
         name = ast.unparse(node)
         name = name if isinstance(node, ast.Name | ast.Call) else f"{{{name}}}"
         return Factor("plain", (expression,), (), name, span)
-    space, rules = _CALLS[call]
-    if len(node.args) != 1:
+    space, taken, fewest, most, rules = _CALLS[call]
+    if not fewest <= len(node.args) <= most:
         known = ", ".join(f"{key}=" for key in rules)
-        message = f"{call}() takes one column or expression, then options by name: {known}."
-        raise source.error(message, span)
-    argument, written = source.expression(node.args[0]), ast.unparse(node.args[0])
+        raise source.error(f"{call}() takes {taken}, then options by name: {known}.", span)
+    arguments = tuple(source.expression(argument) for argument in node.args)
+    written = ", ".join(ast.unparse(argument) for argument in node.args)
     options: dict[str, Option] = {}
     for item in node.keywords:
         key, value = _option(source, call, item)
@@ -400,13 +444,15 @@ def _factor(source: SourceText, piece: _Piece, strict: bool) -> Factor:
     if strict and "period" in rules and "period" not in options:
         message = f"{call}() needs its period: {call}({written}, period=...), {_PERIOD.words}."
         raise source.error(message, span)
+    if options.get("order") == 2:
+        del options["order"]  # what a curve has anyway
     named = [f"{k}={repr(v).removesuffix('.0')}" for k, v in options.items() if k in _NAMING]
     name = f"{call}({', '.join([written, *named])})"
-    return Factor(space, (argument,), tuple(sorted(options.items())), name, span)
+    return Factor(space, arguments, tuple(sorted(options.items())), name, span)
 
 
 def _option(source: SourceText, call: str, item: ast.keyword) -> tuple[str, Option]:
-    rules, span = _CALLS[call][1], span_of(item)
+    rules, span = _CALLS[call].rules, span_of(item)
     if item.arg not in rules:
         message = f"{call}() has no option '{item.arg or '**'}'. {nearest(item.arg or '', rules)}"
         raise source.error(message, span)

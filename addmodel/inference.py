@@ -11,14 +11,16 @@ from numbers import Integral, Real
 
 import numpy as np
 import pandas as pd
-import scipy.linalg
 import scipy.stats
 
 from addmodel.errors import ModelError
 from addmodel.estimate import Estimate
+from addmodel.matrix import DesignMatrix
 from addmodel.spaces.base import FloatArray
 
 DEFAULT_SEED = 20_260_101
+MOST_WRITTEN_OUT = 3_000
+"""Coefficients up to which a covariance matrix may be written out."""
 
 
 def quantile(estimate: Estimate, level: float) -> float:
@@ -39,27 +41,10 @@ def check_level(level: float) -> None:
         raise ModelError(f"A level is a number between 0 and 1, such as 0.95; got {level!r}.")
 
 
-def linear(
-    estimate: Estimate, columns: FloatArray, places: np.ndarray | None = None
-) -> tuple[FloatArray, FloatArray]:
-    """Value and standard error of columns · coefficients.
-
-    Parameters
-    ----------
-    columns : (n, k)
-        In the solver's coordinates.
-    places : (k,) or None
-        Which coefficients they belong to; None: all.
-
-    Returns
-    -------
-    value, std_error : (n,)
-    """
-    chosen = np.arange(len(estimate.coefficients)) if places is None else places
-    value = columns @ estimate.coefficients[chosen]
-    covariance = estimate.covariance[np.ix_(chosen, chosen)]
-    variance = np.einsum("ij,ij->i", columns @ covariance, columns)
-    return value, np.sqrt(np.maximum(variance, 0.0))
+def linear(estimate: Estimate, matrix: DesignMatrix) -> tuple[FloatArray, FloatArray]:
+    """Value and standard error of columns · coefficients, each (n,)."""
+    variance = estimate.posterior.variance(matrix)
+    return matrix.times(estimate.coefficients), np.sqrt(np.maximum(variance, 0.0))
 
 
 def corrected_df(estimate: Estimate) -> float:
@@ -68,22 +53,24 @@ def corrected_df(estimate: Estimate) -> float:
 
     V' = J V_ρ J'. V'' = φ Σ_kl (V_ρ)_kl ∂L/∂ρ_k (∂L/∂ρ_l)' for the lower Cholesky factor L of A⁻¹:
     from ∂A⁻¹/∂ρ_k = −λ_k A⁻¹E_kA⁻¹, with E_k the identity on block k, follows ∂L/∂ρ_k = LΦ(M_k),
-    M_k = −λ_k L'E_kL and Φ the lower triangle with half the diagonal; and X'WX = A − Λ.
+    M_k = −λ_k L'E_kL and Φ the lower triangle with half the diagonal; and X'WX = A − Λ. With more
+    than MOST_WRITTEN_OUT coefficients (many groups) V'' is left out.
     """
-    design, spread = estimate.design, estimate.smoothing_spread
-    used = np.flatnonzero(np.diag(estimate.covariance) > 0)
-    inverse = estimate.covariance[np.ix_(used, used)] / estimate.scale
+    total = float(estimate.column_df.sum()) + estimate.spread_df
+    if len(estimate.coefficients) > MOST_WRITTEN_OUT or not estimate.smoothing_root.size:
+        return total
+    covariance = estimate.posterior.whole()
+    used = np.flatnonzero(np.diag(covariance) > 0)
+    inverse = covariance[np.ix_(used, used)] / estimate.scale
     size = np.sqrt(np.diag(inverse))
     root = size[:, None] * np.linalg.cholesky(inverse / np.outer(size, size))
-    ridge = np.zeros(len(estimate.coefficients))
+    ridge = np.zeros(len(covariance))
     owner = np.full(len(ridge), -1)
-    for k, place in enumerate(design.block_places):
+    for k, place in enumerate(estimate.design.block_places):
         ridge[place] = estimate.smoothing[k] if np.isfinite(estimate.smoothing[k]) else 0.0
         owner[place] = k
     penalty = root.T @ (ridge[used, None] * root)
     kept = np.eye(len(used)) - penalty  # L'X'WXL
-    first = scipy.linalg.solve_triangular(root, spread[used], lower=True) / np.sqrt(estimate.scale)
-    total = float(estimate.column_df.sum() + np.sum(first * (kept @ first)))
     turned = []
     for column in estimate.smoothing_root.T:
         push = ridge[used] * np.where(owner[used] >= 0, column[owner[used]], 0.0)
@@ -99,9 +86,9 @@ def coefficients_table(estimate: Estimate, level: float = 0.95) -> pd.DataFrame:
     """
     design = estimate.design
     p = design.p
-    change = design.reporting()[:p, :p]
+    change = design.reporting()
     value = change @ estimate.coefficients[:p]
-    covariance = change @ estimate.covariance[:p, :p] @ change.T
+    covariance = change @ estimate.posterior.dense[:p, :p] @ change.T
     error = np.sqrt(np.diag(covariance))
     half = quantile(estimate, level) * error
     left = max(estimate.n - float(estimate.column_df.sum()), 1.0)
@@ -129,16 +116,12 @@ def components_table(estimate: Estimate) -> pd.DataFrame:
     design = estimate.design
     rows = []
     for j in range(len(design.components)):
-        own = [
-            float(lam)
-            for lam, owner in zip(estimate.smoothing, design.block_owners, strict=True)
-            if owner == j
-        ]
+        own = [float(estimate.smoothing[k]) for k in design.blocks_of(j)]
         rows.append(
             {
                 "effective_df": estimate.component_df(j),
                 "share": float(estimate.shares[j]),
-                "smoothing": own[0] if own else np.nan,
+                "smoothing": own[0] if len(own) == 1 else np.nan,
             }
         )
     names = [c.name for c in design.components]
@@ -155,14 +138,7 @@ def posterior_draws(estimate: Estimate, count: int, seed: int) -> FloatArray:
         raise ModelError(f"The number of draws is a whole number of at least 1; got {count!r}.")
     if isinstance(seed, bool) or not isinstance(seed, Integral) or seed < 0:
         raise ModelError(f"A seed is a whole number of at least 0; got {seed!r}.")
-    change = estimate.design.reporting()
-    used = np.diag(estimate.covariance) > 0
-    covariance = estimate.covariance[np.ix_(used, used)]
-    # Scaled to a correlation: the columns of a block differ by many orders of magnitude.
-    spread = np.sqrt(np.diag(covariance))
-    values, vectors = scipy.linalg.eigh(covariance / np.outer(spread, spread))
-    root = spread[:, None] * vectors * np.sqrt(np.maximum(values, 0.0))
-    noise = np.random.default_rng(seed).standard_normal((count, int(used.sum())))
-    draws = np.tile(estimate.coefficients, (count, 1))
-    draws[:, used] += noise @ root.T
-    return np.asarray(draws @ change.T, dtype=np.float64)
+    draws = estimate.coefficients + estimate.posterior.draws(count, np.random.default_rng(seed))
+    p = estimate.design.p
+    draws[:, :p] = draws[:, :p] @ estimate.design.reporting().T
+    return np.asarray(draws, dtype=np.float64)

@@ -8,15 +8,16 @@ from dataclasses import dataclass, replace
 import numpy as np
 import scipy.optimize
 
-from addmodel.component import Design
 from addmodel.data import Table
+from addmodel.design import Design
 from addmodel.errors import ModelError
+from addmodel.matrix import DesignMatrix, Layout
 from addmodel.outcomes import Outcome
 from addmodel.outcomes.likelihood import Likelihood
 from addmodel.rows.dense import DenseRows
 from addmodel.solve.criteria import Criterion
 from addmodel.solve.pirls import Modes
-from addmodel.solve.quadratic import IndexArray, Point
+from addmodel.solve.quadratic import IndexArray, Solution
 from addmodel.solve.smoothness import MODALLY, Smoothness, choose, choose_mode, newton, polish
 from addmodel.spaces.base import FloatArray
 
@@ -39,15 +40,15 @@ class Laid:
         cls, design: Design, table: Table, outcome: Outcome, criterion: Criterion, scale: float
     ) -> Laid:
         """The design's columns at the rows of the table; `scale` is φ where it is known."""
-        weights = row_weights(table)
+        weights = table.prior
         values = {key: column.values for key, column in table.columns.items()}
-        columns = design.matrix(values, len(weights))
-        plain = columns[:, : design.p] * np.sqrt(table.counts)[:, None]
+        matrix = design.matrix(values, len(weights))
+        plain = matrix.dense[:, : design.p] * np.sqrt(table.counts)[:, None]
         diagonal = np.diag(np.linalg.qr(plain)[1])
-        start = np.zeros(columns.shape[1])
+        start = np.zeros(matrix.layout.total)
         start[0] = null_predictor(table, outcome)
         modes = Modes(
-            rows=DenseRows(columns, table.outcome, weights, table.offset),
+            rows=DenseRows(matrix, table.outcome, weights, table.offset),
             outcome=outcome,
             p=design.p,
             sizes=design.block_sizes,
@@ -66,8 +67,11 @@ class Laid:
     def smoothness(self, criterion: Criterion) -> Smoothness:
         """Choose smoothness; from sums taken anew about the solution where digits were lost."""
         owners = [self.design.components[j] for j in self.design.block_owners]
-        fixed = [c.smoothing for c in owners]
-        degrees = [None if c.df is None else c.df - len(c.own) for c in owners]
+        blocks = self.design.blocks
+        fixed = [b.fixed for b in blocks]
+        degrees = [
+            None if b.df is None else b.df - len(c.own) for b, c in zip(blocks, owners, strict=True)
+        ]
         problem = self.modes.quadratic(self.start, fisher=True)
         for j, spanned in enumerate(problem.spanned):
             if spanned and (fixed[j] is not None or degrees[j] is not None):
@@ -90,14 +94,7 @@ class Laid:
     @property
     def free_blocks(self) -> IndexArray:
         """The blocks whose smoothing parameter is to be chosen."""
-        owners = [self.design.components[j] for j in self.design.block_owners]
-        return np.flatnonzero([c.smoothing is None and c.df is None for c in owners])
-
-
-def row_weights(table: Table) -> FloatArray:
-    """Prior weight times count times trials, (n,)."""
-    weights: FloatArray = table.weights * table.counts * table.trials
-    return weights
+        return np.flatnonzero([b.fixed is None and b.df is None for b in self.design.blocks])
 
 
 def likelihood_of(table: Table, outcome: Outcome, scale: float) -> Likelihood:
@@ -108,14 +105,16 @@ def likelihood_of(table: Table, outcome: Outcome, scale: float) -> Likelihood:
 
 def null_predictor(table: Table, outcome: Outcome) -> float:
     """The constant linear predictor beside the offset, by Fisher scoring in one coefficient."""
-    weights = row_weights(table)
-    one = DenseRows(np.ones((len(weights), 1)), table.outcome, weights, table.offset)
+    weights = table.prior
+    n = len(weights)
+    column = DesignMatrix(np.ones((n, 1)), np.empty((n, 0)), np.full(n, -1), Layout(1, 0, ()))
+    one = DenseRows(column, table.outcome, weights, table.offset)
     mean = float(np.average(table.outcome, weights=weights))
     typical = outcome.family.starting_mu(np.array([mean, mean]))[:1]
     beta = np.asarray(outcome.family.link(typical), dtype=np.float64) - np.average(table.offset)
     for _ in range(50):
         sums = one.sweep(beta, outcome, fisher=True)
-        step = sums.score / sums.gram[0]
+        step = sums.score / sums.gram.dense[0]
         size = 1.0
         while one.deviance(beta + size * step, outcome) > sums.deviance and size > 1e-9:
             size /= 2
@@ -125,9 +124,9 @@ def null_predictor(table: Table, outcome: Outcome) -> float:
     return float(beta[0])
 
 
-def quasi_scale(outcome: Outcome, table: Table, eta: FloatArray, point: Point) -> float:
+def quasi_scale(outcome: Outcome, table: Table, eta: FloatArray, point: Solution) -> float:
     """Pearson's X²/(n − τ) (Wedderburn 1974; McCullagh & Nelder 1989, ch. 9)."""
-    pearson = outcome.pearson(table.outcome, outcome.mean(eta), row_weights(table))
+    pearson = outcome.pearson(table.outcome, outcome.mean(eta), table.prior)
     return max(pearson / max(point.problem.n - point.effective_df, 1.0), 1e-300)
 
 

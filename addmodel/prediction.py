@@ -3,7 +3,7 @@
 from __future__ import annotations
 
 import warnings
-from collections.abc import Iterable, Mapping, Sequence
+from collections.abc import Callable, Iterable, Mapping, Sequence
 from dataclasses import replace
 from types import MappingProxyType
 from typing import Literal
@@ -12,6 +12,7 @@ import numpy as np
 import pandas as pd
 
 from addmodel.columns import MISSING_LEVEL, UNSEEN_LEVEL, column_key
+from addmodel.component import Seen
 from addmodel.data import NewRows, read_new
 from addmodel.errors import Caution, DataError, ModelError, nearest
 from addmodel.estimate import Estimate
@@ -35,10 +36,12 @@ def predict(
     without: str | Sequence[str] | None,
     per: float | None,
     unseen: Literal["error", "base", "average"],
+    groups: Literal["own", "zero", "average"],
     missing: Literal["keep", "error"],
 ) -> FloatArray | pd.DataFrame:
     """See `Fit.predict`."""
     _check("scale", scale, ("outcome", "link"))
+    _check("groups", groups, ("own", "zero", "average"))
     _check("unseen", unseen, ("error", "base", "average"))
     if new_observation and interval is None:
         raise ModelError("new_observation=True needs interval=, such as interval=0.95.")
@@ -51,12 +54,29 @@ def predict(
     rows = new_rows(estimate, new, unseen=unseen, missing=missing, roles=roles)
     design = estimate.design
     values = {key: column.values for key, column in rows.columns.items()}
-    columns = design.matrix(_filled(values), rows.n)
-    places = np.concatenate(
-        [[0] if only is None else [], *(design.places(j) for j in chosen)]
-    ).astype(np.int64)
-    result, error = linear(estimate, columns[:, places], places)
-    error = np.sqrt(error**2 + _between_levels(estimate, chosen, rows))
+    seen = Seen(_filled(values), rows.n)
+    matrix = design.matrix(seen.values, rows.n)
+    dense, wide = design.masks(chosen, intercept=only is None)
+    between = np.zeros(rows.n)
+    for k, (owner, block) in enumerate(design.owned_blocks):
+        if owner not in chosen or not block.grouped:
+            continue
+        left_out = groups != "own"
+        if left_out and block.apart:
+            wide[_part(design.layout.parts, k - len(design.blocks))] = False
+        elif left_out:
+            dense[design.block_places[k]] = False
+        unknown = left_out | design.components[owner].unknown_groups(block, seen)
+        spread = design.components[owner].group_squares(block, seen)
+        between += np.where(unknown, spread * estimate.scale / estimate.smoothing[k], 0.0)
+    result, error = linear(estimate, matrix.masked(dense, wide))
+    error = np.sqrt(
+        error**2
+        + (0.0 if groups != "own" else between)
+        + _between_levels(estimate, chosen, rows, seen)
+    )
+    if groups == "own" and between.any():
+        _say_unknown(int((between > 0).sum()))
     result += rows.offset + known
     absent = rows.missing
     result[absent] = np.nan
@@ -77,6 +97,8 @@ def predict(
             stacklevel=3,
         )
     mean = estimate.outcome.mean if scale == "outcome" else _same
+    if groups == "average" and scale == "outcome":
+        mean = _averaged(estimate, between)
     if interval is None:
         return mean(result)
     if new_observation and not estimate.outcome.plain:
@@ -144,26 +166,68 @@ def _offsets(estimate: Estimate, per: float | None) -> tuple[dict[str, str], flo
     return given, known
 
 
-def _between_levels(estimate: Estimate, chosen: Sequence[int], rows: NewRows) -> FloatArray:
+def _part(parts: Sequence[int], from_end: int) -> slice:
+    """Where a block apart, counted from the end, is among the wide columns."""
+    ends = np.cumsum([0, *parts])
+    k = len(parts) + from_end
+    return slice(int(ends[k]), int(ends[k + 1]))
+
+
+def _averaged(estimate: Estimate, variance: FloatArray) -> Callable[[FloatArray], FloatArray]:
+    """The mean over groups whose linear predictors differ with that variance (n,).
+
+    ∫ g⁻¹(η + √v z) dΦ(z) by Gauss–Hermite quadrature: with a log link, exp(v/2) times the mean of
+    the group in the middle.
+    """
+    nodes, shares = np.polynomial.hermite_e.hermegauss(41)
+    shares = shares / shares.sum()
+
+    def mean(eta: FloatArray) -> FloatArray:
+        at = eta[:, None] + np.sqrt(variance)[:, None] * nodes
+        return np.asarray(estimate.outcome.mean(at.ravel()).reshape(at.shape) @ shares)
+
+    return mean
+
+
+def _say_unknown(rows: int) -> None:
+    warnings.warn(
+        f"{rows} rows are of groups that the fit has not seen: they stand at the middle of the "
+        "groups, with intervals as wide as groups differ.",
+        Caution,
+        stacklevel=4,
+    )
+
+
+def _between_levels(
+    estimate: Estimate, chosen: Sequence[int], rows: NewRows, seen: Seen
+) -> FloatArray:
     """Variance of a level's effect about the average, for rows whose level is not known, (n,)."""
+    design = estimate.design
     total = np.zeros(rows.n)
-    for j in chosen:
-        (space,) = estimate.design.components[j].spaces
-        if not isinstance(space, Levels) or space.key not in rows.unseen:
+    for key in rows.unseen:
+        theirs = [
+            j
+            for j in chosen
+            if any(isinstance(s, Levels) and key in s.keys for s in design.components[j].spaces)
+        ]
+        at = np.flatnonzero(rows.columns[key].values == UNSEEN_LEVEL)
+        if not theirs or not len(at):
             continue
-        codes = np.arange(len(space.labels))
-        own = estimate.design.component_matrix(j, {space.key: codes})
-        effects = own @ estimate.coefficients[estimate.design.places(j)]
-        between = float(estimate.design.spreads[space.key].shares @ effects**2)
-        unknown = rows.columns[space.key].values == UNSEEN_LEVEL
-        total[unknown] += between
-        if unknown.any():
-            warnings.warn(
-                f"{int(unknown.sum())} rows have a level of {space.key} that the fit has not seen: "
-                "they stand at the average of the levels, with intervals as wide as levels differ.",
-                Caution,
-                stacklevel=4,
-            )
+        values = {k: x[at] for k, x in seen.values.items()}
+        effects = []
+        for code in range(len(design.columns[key].levels)):
+            there = {**values, key: np.full(len(at), code)}
+            own = design.of_components(there, len(at), theirs)
+            effects.append(own.times(estimate.coefficients))
+        shares = design.spreads[key].shares[:, None]
+        about = np.array(effects) - (shares * effects).sum(axis=0)
+        total[at] += (shares * about**2).sum(axis=0)
+        warnings.warn(
+            f"{len(at)} rows have a level of {key} that the fit has not seen: "
+            "they stand at the average of the levels, with intervals as wide as levels differ.",
+            Caution,
+            stacklevel=4,
+        )
     return total
 
 
@@ -172,7 +236,9 @@ def model_columns(estimate: Estimate, new: object) -> pd.DataFrame:
     rows = new_rows(estimate, new, unseen="error", missing="error")
     design = estimate.design
     values = {key: column.values for key, column in rows.columns.items()}
-    raw = np.linalg.solve(design.reporting().T, design.matrix(values, rows.n).T).T
+    raw = design.matrix(values, rows.n).whole()
+    p = design.p
+    raw[:, :p] = np.linalg.solve(design.reporting().T, raw[:, :p].T).T
     return pd.DataFrame(raw, index=rows.index, columns=list(design.names))
 
 
@@ -193,8 +259,16 @@ def new_rows(
             for expression in factor.arguments:
                 expressions[column_key(factor, expression)] = expression
     rows = read_new(new, estimate.design.columns, expressions, roles=roles, missing=missing)
-    if rows.unseen and unseen == "error":
-        key, found = next(iter(rows.unseen.items()))
+    levelled = {
+        key
+        for component in estimate.design.components
+        for space in component.spaces
+        if isinstance(space, Levels)
+        for key in space.keys
+    }
+    unknown = [(key, found) for key, found in rows.unseen.items() if key in levelled]
+    if unknown and unseen == "error":
+        key, found = unknown[0]
         first = found[0]
         raise DataError(
             f"{key} has the level '{first.label}' (row {int(first.rows[0])}, counted from 0), "

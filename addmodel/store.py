@@ -21,21 +21,31 @@ from typing import Any
 import numpy as np
 
 from addmodel.columns import Column
-from addmodel.component import Component, Design, Spread
+from addmodel.component import Block, Component, Strand, View
+from addmodel.design import Design, Joint, Spread
 from addmodel.errors import DataError
 from addmodel.estimate import Estimate, Reading
 from addmodel.files import replacing
 from addmodel.formula import Model, parse
+from addmodel.matrix import Layout
 from addmodel.outcomes import Outcome, outcome_described
+from addmodel.posterior import Posterior
 from addmodel.spaces.curve import Curve
 from addmodel.spaces.cycle import Cycle
+from addmodel.spaces.globe import Globe
+from addmodel.spaces.group import Group
 from addmodel.spaces.levels import Levels
 from addmodel.spaces.line import Line
+from addmodel.spaces.place import Place
 
-VERSION = 1
+VERSION = 2
 KINDS: dict[str, type[Any]] = {
     kind.__name__: kind
-    for kind in (Column, Component, Curve, Cycle, Design, Estimate, Levels, Line, Reading, Spread)
+    for kind in (
+        *(Column, Spread, Joint, Design, Component, Strand, Block, View),
+        *(Line, Levels, Curve, Cycle, Place, Globe, Group),
+        *(Estimate, Reading, Posterior, Layout),
+    )
 }
 DIGEST = "sha256"
 DAMAGE = (
@@ -127,8 +137,10 @@ def _encoded(value: Any, arrays: list[np.ndarray[Any, Any]]) -> Any:
         }
         return {"kind": type(value).__name__, "fields": fields}
     if isinstance(value, np.ndarray):
-        arrays.append(value)
-        return {"array": len(arrays) - 1}
+        # Components share their spaces: an array is written once.
+        number = next((i for i, known in enumerate(arrays) if known is value), len(arrays))
+        arrays += [value] if number == len(arrays) else []
+        return {"array": number}
     if isinstance(value, Mapping):
         return {"map": [[k, _encoded(v, arrays)] for k, v in value.items()]}
     if isinstance(value, tuple | list):
@@ -156,7 +168,10 @@ def _decoded(value: Any, members: Mapping[str, bytes]) -> Any:
         array.setflags(write=False)
         return array
     if "map" in value:
-        return MappingProxyType({k: _decoded(v, members) for k, v in value["map"]})
+        # A key of several columns is written as a list.
+        return MappingProxyType(
+            {tuple(k) if isinstance(k, list) else k: _decoded(v, members) for k, v in value["map"]}
+        )
     if "float" in value:
         return float.fromhex(value["float"])
     kind = KINDS[value["kind"]]

@@ -10,10 +10,13 @@ import pandas as pd
 
 from addmodel.estimate import Estimate
 from addmodel.inference import coefficients_table, components_table
-from addmodel.spaces.base import Penalised
+from addmodel.spaces.base import Space
 from addmodel.spaces.cycle import Cycle
+from addmodel.spaces.globe import Globe
+from addmodel.spaces.group import Group
 from addmodel.spaces.levels import Levels
 from addmodel.spaces.line import Line
+from addmodel.spaces.place import Place
 
 WIDTH = 88
 
@@ -106,25 +109,31 @@ def _words(estimate: Estimate) -> str:
         f"The model has {1 + sum_df(estimate):.1f} effective degrees of freedom and takes away "
         f"{_percent(reduction)} of {taken}."
     )
-    bending = [
-        j for j, c in enumerate(estimate.design.components) if isinstance(c.spaces[0], Penalised)
-    ]
+    design = estimate.design
+    bending = [j for j, c in enumerate(design.components) if any(block.bends for block in c.blocks)]
     if bending:
-        unsure = [
-            estimate.design.components[j].name for j in bending if not estimate.detail_confirmed[j]
-        ]
+        unsure = [design.components[j].name for j in bending if not estimate.detail_confirmed[j]]
         sentences.append(
             "The detail was confirmed: more functions would change nothing."
             if not unsure
             else f"The detail of {', '.join(unsure)} is bound: more functions might be used."
         )
-    straight = [estimate.design.components[j].name for j in bending if estimate.at_infinity(j)]
+    grouped = {j for j, block in design.owned_blocks if block.grouped}
+    gone = [j for j in range(design.count) if estimate.at_infinity(j)]
+    straight = [design.components[j].name for j in gone if j not in grouped]
     if straight:
         verb = "has" if len(straight) == 1 else "have"
         sentences.append(
             f"{', '.join(straight)} {verb} no bend left: the smoothing parameter ran to infinity, "
             "and only the unpenalised part remains."
         )
+    alike = [design.components[j].name for j in gone if j in grouped]
+    if alike:
+        sentences.append(
+            f"No variation is left between the groups of {', '.join(alike)}: the smoothing "
+            "parameter ran to infinity."
+        )
+    sentences += _variances(estimate)
     return " ".join(sentences)
 
 
@@ -160,8 +169,35 @@ def predictor_words(estimate: Estimate) -> str:
     return LINK_WORDS.get(link, f"The linear predictor (link {link})")
 
 
+def _variances(estimate: Estimate) -> list[str]:
+    """How much groups differ: the standard deviation √(φ/λ) of their effects."""
+    design = estimate.design
+    found = []
+    for j, component in enumerate(design.components):
+        blocks = [k for k in design.blocks_of(j) if design.blocks[k].grouped]
+        plain = [k for k in blocks if not design.blocks[k].bends]
+        if len(plain) == 1 and np.isfinite(estimate.smoothing[plain[0]]):
+            spread = np.sqrt(estimate.scale / estimate.smoothing[plain[0]])
+            found.append(f"{spread:.4g} ({component.name})")
+    if not found:
+        return []
+    return [f"The standard deviation between groups is {', '.join(found)}."]
+
+
 def _term_words(estimate: Estimate, j: int) -> str:
-    (space,) = estimate.design.components[j].spaces
+    component = estimate.design.components[j]
+    if len(component.spaces) > 1:
+        return "the product of " + " and ".join(
+            space_words(estimate, space) for space in component.spaces
+        )
+    words = space_words(estimate, component.spaces[0])
+    bends = not isinstance(component.spaces[0], Cycle | Globe | Group)
+    flat = "which came out straight" if bends else "which came out flat"
+    return f"{words}, {flat}" if estimate.at_infinity(j) else words
+
+
+def space_words(estimate: Estimate, space: Space) -> str:
+    """A space in words."""
     if isinstance(space, Line):
         return f"a straight line in {space.key}"
     if isinstance(space, Levels):
@@ -170,9 +206,14 @@ def _term_words(estimate: Estimate, j: int) -> str:
         length = space.period if isinstance(space.period, str) else f"{space.period:g}"
         days = " days" if estimate.design.columns[space.key].kind == "date" else ""
         return f"a cycle of {space.key} (period {length}{days if length[0].isdigit() else ''})"
-    if estimate.at_infinity(j):
-        return f"a curve of {space.key}, which came out straight"
-    return f"a curve of {space.key}"
+    if isinstance(space, Group):
+        return f"{space.size:,} exchangeable groups of {space.key}"
+    if isinstance(space, Globe):
+        return f"a map on the globe of {space.key}"
+    if isinstance(space, Place):
+        return f"a map of {space.key}"
+    order = {1: "a broken line", 3: "a quintic curve"}.get(getattr(space, "order", 2), "a curve")
+    return f"{order} of {space.key}"
 
 
 def deviance_reduction(estimate: Estimate) -> float:

@@ -8,9 +8,38 @@ from __future__ import annotations
 
 from abc import ABC, abstractmethod
 from dataclasses import dataclass
+from typing import NamedTuple
 
+import numpy as np
+
+from addmodel.matrix import Layout
 from addmodel.outcomes import Outcome
+from addmodel.posterior import Posterior
 from addmodel.spaces.base import FloatArray
+
+
+class Gram(NamedTuple):
+    """X'WX: the dense columns with each other, with each level's own, and those of each level."""
+
+    dense: FloatArray  # (D, D)
+    across: FloatArray  # (levels, b, D)
+    own: FloatArray  # (levels, b, b)
+
+    def times(self, vector: FloatArray, layout: Layout) -> FloatArray:
+        """X'WX · vector (P,)."""
+        first = vector[: layout.dense]
+        product = self.dense @ first
+        if not layout.parts:
+            return np.asarray(product, dtype=np.float64)
+        apart = layout.by_level(vector)
+        product = product + np.einsum("lbd,lb->d", self.across, apart)
+        theirs = self.across @ first + np.einsum("lbc,lc->lb", self.own, apart)
+        return np.concatenate([product, layout.flat(theirs)])
+
+    def diagonal(self, layout: Layout) -> FloatArray:
+        """(P,)."""
+        own = np.diagonal(self.own, axis1=1, axis2=2)
+        return np.concatenate([np.diag(self.dense), layout.flat(own)])
 
 
 @dataclass(frozen=True)
@@ -22,19 +51,21 @@ class Sums:
     """
 
     at: FloatArray  # (P,) coefficients
-    gram: FloatArray  # (P, P) X'WX
+    gram: Gram
     score: FloatArray  # (P,) φ ∂ℓ/∂β
     deviance: float
+    layout: Layout
 
     def moved(self, to: FloatArray) -> Sums:
         """The same quadratic, written about other coefficients."""
         step = to - self.at
-        along = self.gram @ step
+        along = self.gram.times(step, self.layout)
         return Sums(
             at=to,
             gram=self.gram,
             score=self.score - along,
             deviance=self.deviance - 2 * float(self.score @ step) + float(step @ along),
+            layout=self.layout,
         )
 
 
@@ -48,7 +79,7 @@ class Rows(ABC):
         outcome: Outcome,
         *,
         fisher: bool = False,
-        gram: FloatArray | None = None,
+        gram: Gram | None = None,
     ) -> Sums:
         """Sums over all rows at the coefficients (P,).
 
@@ -62,7 +93,7 @@ class Rows(ABC):
 
     @abstractmethod
     def leverage_sweep(
-        self, coefficients: FloatArray, outcome: Outcome, inner: FloatArray, *, fisher: bool = False
+        self, coefficients: FloatArray, outcome: Outcome, inner: Posterior, *, fisher: bool = False
     ) -> FloatArray:
         """Σ_i (x_i' M x_i) w_i′ x_i (P,), M = `inner`, w′ the derivative of the weight in η."""
 

@@ -1,13 +1,20 @@
-"""Rows held as one dense matrix: exact columns and BLAS, for up to some ten thousand rows."""
+"""Rows held in memory: exact columns and BLAS, for up to some ten thousand rows.
+
+The columns of the group set apart are kept as each row sees them, so that many levels cost little.
+"""
 
 from __future__ import annotations
 
 from dataclasses import dataclass
+from functools import cached_property
 
 import numpy as np
+import scipy.sparse
 
+from addmodel.matrix import DesignMatrix, IntArray
 from addmodel.outcomes import Outcome
-from addmodel.rows.base import Rows, Sums
+from addmodel.posterior import Posterior
+from addmodel.rows.base import Gram, Rows, Sums
 from addmodel.spaces.base import FloatArray
 
 
@@ -15,7 +22,7 @@ from addmodel.spaces.base import FloatArray
 class DenseRows(Rows):
     """All rows in memory."""
 
-    columns: FloatArray  # (n, P)
+    matrix: DesignMatrix
     y: FloatArray  # (n,)
     weights: FloatArray  # (n,) prior weight, times count, times trials
     offset: FloatArray  # (n,)
@@ -26,7 +33,7 @@ class DenseRows(Rows):
         outcome: Outcome,
         *,
         fisher: bool = False,
-        gram: FloatArray | None = None,
+        gram: Gram | None = None,
     ) -> Sums:
         eta = self.linear_predictor(coefficients)
         curvature = outcome.curvature(self.y, eta, self.weights)
@@ -35,31 +42,70 @@ class DenseRows(Rows):
         return Sums(
             at=coefficients,
             gram=gram,
-            score=self.columns.T @ curvature.slope,
+            score=self._summed(curvature.slope),
             deviance=outcome.deviance(self.y, outcome.mean(eta), self.weights),
+            layout=self.matrix.layout,
         )
 
-    def _gram(self, weight: FloatArray) -> FloatArray:
+    def _gram(self, weight: FloatArray) -> Gram:
+        dense, wide, layout = self.matrix.dense, self.matrix.wide, self.matrix.layout
+        b, levels = wide.shape[1], layout.levels
+        across = np.zeros((levels, b, layout.dense))
+        own = np.zeros((levels, b, b))
+        for k in range(b):
+            across[:, k] = self._by_level(weight * wide[:, k]) @ dense
+            for m in range(k + 1):
+                own[:, k, m] = own[:, m, k] = np.bincount(
+                    self.matrix.codes, weight * wide[:, k] * wide[:, m], minlength=levels
+                )
+        return Gram(self._dense_gram(weight), across, own)
+
+    def _dense_gram(self, weight: FloatArray) -> FloatArray:
+        columns = self.matrix.dense
         if (weight == 1).all():
-            return self.columns.T @ self.columns
+            return columns.T @ columns
         if weight.min() < 0:
-            return self.columns.T @ (self.columns * weight[:, None])
-        rooted = self.columns * np.sqrt(weight)[:, None]
+            return columns.T @ (columns * weight[:, None])
+        rooted = columns * np.sqrt(weight)[:, None]
         return rooted.T @ rooted
+
+    @cached_property
+    def _order(self) -> tuple[IntArray, IntArray]:
+        """The rows level by level, and where each level begins."""
+        codes, levels = self.matrix.codes, self.matrix.layout.levels
+        starts = np.concatenate([[0], np.cumsum(np.bincount(codes, minlength=levels))])
+        return np.argsort(codes, kind="stable"), starts
+
+    def _by_level(self, values: FloatArray) -> scipy.sparse.csr_array:
+        """(levels, n) matrix that sums values (n,) times what follows it over each level."""
+        order, starts = self._order
+        return scipy.sparse.csr_array(
+            (values[order], order, starts), shape=(len(starts) - 1, len(order))
+        )
+
+    def _summed(self, values: FloatArray) -> FloatArray:
+        """X' · values (P,)."""
+        total: FloatArray = self.matrix.dense.T @ values
+        if not self.matrix.layout.parts:
+            return total
+        layout, wide = self.matrix.layout, self.matrix.wide
+        apart = [
+            np.bincount(self.matrix.codes, values * column, minlength=layout.levels)
+            for column in wide.T
+        ]
+        return np.concatenate([total, layout.flat(np.stack(apart, axis=1))])
 
     def deviance(self, coefficients: FloatArray, outcome: Outcome) -> float:
         mean = outcome.mean(self.linear_predictor(coefficients))
         return outcome.deviance(self.y, mean, self.weights)
 
     def leverage_sweep(
-        self, coefficients: FloatArray, outcome: Outcome, inner: FloatArray, *, fisher: bool = False
+        self, coefficients: FloatArray, outcome: Outcome, inner: Posterior, *, fisher: bool = False
     ) -> FloatArray:
         eta = self.linear_predictor(coefficients)
         observed, expected = outcome.weight_slopes(self.y, eta, self.weights)
-        leverage = np.einsum("ij,ij->i", self.columns @ inner, self.columns)
-        total: FloatArray = self.columns.T @ (leverage * (expected if fisher else observed))
-        return total
+        leverage = inner.variance(self.matrix)
+        return self._summed(leverage * (expected if fisher else observed))
 
     def linear_predictor(self, coefficients: FloatArray) -> FloatArray:
-        eta: FloatArray = self.offset + self.columns @ coefficients
-        return eta
+        return self.offset + self.matrix.times(coefficients)

@@ -13,7 +13,8 @@ import numpy as np
 import scipy.linalg
 import scipy.special
 
-from addmodel.spaces.base import FloatArray, Penalised
+from addmodel.spaces.base import FloatArray
+from addmodel.spaces.spline import Spline
 
 CEILING = 800
 """More functions than this are kept only when the formula says detail="all"."""
@@ -26,43 +27,72 @@ SLOWEST = 6
 """Bands of waves begin about here."""
 
 
-def wanted(
-    space: Penalised,
-    shrinkage: FloatArray,
+def enough(shrinkage: FloatArray, growth: float) -> int | None:
+    """A larger number of functions, where the last tenth of those kept is shrunk too little.
+
+    Parameters
+    ----------
+    shrinkage : (q,)
+        λ(A⁻¹)_kk of each function: 0 is free, 1 is gone; ones where λ is infinite.
+    growth : float
+        Roughness grows as this power of the function's number.
+    """
+    size = len(shrinkage)
+    least = float(shrinkage[-max(1, size // 10) :].min())
+    if least >= SHRUNK:
+        return None
+    # Shrinkage is λγ/(n + λγ), γ growing as that power: about as many as are needed.
+    odds = max(least / (1 - least), 1e-9)
+    factor = (SHRUNK / (1 - SHRUNK) / odds) ** (1 / growth)
+    return int(np.ceil(np.clip(1.1 * factor, GROWTH, FASTEST) * size))
+
+
+def left_over_functions(
+    kept: FloatArray,
+    omitted: FloatArray,
+    residuals: FloatArray,
+    weights: FloatArray,
+    scale: float,
+    bands: int,
+) -> bool:
+    """Whether functions that a block leaves out stand out of the noise.
+
+    Parameters
+    ----------
+    kept, omitted : (n, q), (n, m)
+        Columns of the block, and those that come next, smoothest first.
+    residuals, weights : (n,)
+        Working residuals and working weights of the rows.
+    scale : float
+        Variance of a residual of weight one.
+    bands : int
+        Into how many bands the omitted ones are cut.
+
+    With Z a band of omitted columns less their projection on the kept ones, s = Z'Wr has covariance
+    φ Z'WZ at most when nothing is left over: s'(Z'WZ)⁻¹s/φ against chi-square.
+    """
+    root = np.sqrt(weights)[:, None]
+    base = np.linalg.qr(root * np.concatenate([np.ones((len(kept), 1)), kept], axis=1))[0]
+    outside = root * omitted
+    outside = outside - base @ (base.T @ outside)
+    target = root[:, 0] * residuals
+    target = target - base @ (base.T @ target)
+    for band in np.array_split(np.arange(outside.shape[1]), bands):
+        values, vectors = np.linalg.eigh(outside[:, band].T @ outside[:, band])
+        solid = values > 1e-8 * max(float(values[-1]), np.finfo(float).tiny)
+        along = (vectors[:, solid].T @ (outside[:, band].T @ target)) ** 2 / values[solid]
+        if scipy.special.chdtrc(int(solid.sum()), along.sum() / scale) < LEVEL / bands:
+            return True
+    return False
+
+
+def left_over(
+    space: Spline,
+    size: int,
     x: FloatArray,
     residuals: FloatArray,
     weights: FloatArray,
     scale: float,
-) -> int:
-    """Number of penalised functions that a space should have; its present one if that is enough.
-
-    Parameters
-    ----------
-    space : Penalised
-        The space as it stands.
-    shrinkage : (size,)
-        λ(A⁻¹)_kk of its functions: 0 is free, 1 is gone; ones where λ is infinite.
-    x, residuals, weights : (n,)
-        Covariate, working residuals and working weights of the rows.
-    scale : float
-        Variance of a residual of weight one.
-    """
-    size = space.size
-    most = min(space.most, CEILING)
-    if size >= most:
-        return size
-    least = float(shrinkage[-max(1, size // 10) :].min())
-    if least < SHRUNK:
-        # Shrinkage is λγ/(n + λγ) with γ growing as the fourth power: about as many as are needed.
-        odds = max(least / (1 - least), 1e-9)
-        factor = (SHRUNK / (1 - SHRUNK) / odds) ** 0.25
-        return min(most, int(np.ceil(np.clip(1.1 * factor, GROWTH, FASTEST) * size)))
-    hit = left_over(space, x, residuals, weights, scale)
-    return size if hit is None else min(most, hit)
-
-
-def left_over(
-    space: Penalised, x: FloatArray, residuals: FloatArray, weights: FloatArray, scale: float
 ) -> int | None:
     """A larger number of functions, where waves that those kept cannot make stand out of the noise.
 
@@ -73,14 +103,19 @@ def left_over(
     even some waves slower than K where the data are dense, so slow bands are looked at too; what
     the kept functions could take if they were not shrunk is taken off before that counts.
     """
-    if _outstanding(space, x, residuals, weights, scale) is None:
+    if _outstanding(space, size, x, residuals, weights, scale) is None:
         return None
-    rest = residuals - _could_take(space, x, residuals, weights)
-    return _outstanding(space, x, rest, weights, scale)
+    rest = residuals - _could_take(space, size, x, residuals, weights)
+    return _outstanding(space, size, x, rest, weights, scale)
 
 
 def _outstanding(
-    space: Penalised, x: FloatArray, residuals: FloatArray, weights: FloatArray, scale: float
+    space: Spline,
+    size: int,
+    x: FloatArray,
+    residuals: FloatArray,
+    weights: FloatArray,
+    scale: float,
 ) -> int | None:
     t = space.scaled(x)
     cells = min(space.distinct, CELLS)
@@ -96,7 +131,7 @@ def _outstanding(
     mass = np.bincount(cell, heaviness, minlength=cells)
     values = np.divide(sums, np.sqrt(mass), out=np.zeros(cells), where=mass > 0)
     squares = space.waves(values) ** 2 / scale
-    edges = [space.size]
+    edges = [size]
     while edges[-1] < len(squares):
         edges.append(int(np.ceil(GROWTH * edges[-1])))
     while edges[0] > SLOWEST:
@@ -105,15 +140,15 @@ def _outstanding(
     for start, stop in bands:
         band = squares[start:stop]
         if len(band) and scipy.special.chdtrc(len(band), band.sum()) < LEVEL / len(bands):
-            return max(stop, int(np.ceil(GROWTH * space.size)))
+            return max(stop, int(np.ceil(GROWTH * size)))
     return None
 
 
 def _could_take(
-    space: Penalised, x: FloatArray, residuals: FloatArray, weights: FloatArray
+    space: Spline, size: int, x: FloatArray, residuals: FloatArray, weights: FloatArray
 ) -> FloatArray:
     """The weighted projection of the residuals on the constant and the space's own columns."""
-    columns = [np.ones((len(x), 1)), space.unpenalised(x), space.penalised(x)]
+    columns = [np.ones((len(x), 1)), space.null(x), space.penalised(x, size)]
     rooted = np.concatenate(columns, axis=1) * np.sqrt(weights)[:, None]
     gram = rooted.T @ rooted
     size = np.sqrt(np.maximum(np.diag(gram), np.finfo(float).tiny))

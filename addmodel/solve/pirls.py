@@ -6,15 +6,16 @@ stand in A, in the criterion and in leverages. Steps are halved until the penali
 
 from __future__ import annotations
 
-from dataclasses import dataclass, fields
-from functools import cached_property
+from dataclasses import dataclass, replace
 
 import numpy as np
 
 from addmodel.outcomes import Outcome
 from addmodel.outcomes.likelihood import Likelihood
-from addmodel.rows.base import Rows
-from addmodel.solve.quadratic import Point, Problem
+from addmodel.posterior import Posterior
+from addmodel.rows.base import Gram, Rows
+from addmodel.solve.grouped import GroupedProblem
+from addmodel.solve.quadratic import Problem, Quadratic, Solution
 from addmodel.spaces.base import FloatArray
 
 STEPS = 60
@@ -42,15 +43,16 @@ class Modes:
     """(P,) the one constant alone: where to begin if the start given is worse than that."""
 
     def quadratic(
-        self, at: FloatArray, *, fisher: bool, gram: FloatArray | None = None, strict: bool = False
-    ) -> Problem:
+        self, at: FloatArray, *, fisher: bool, gram: Gram | None = None, strict: bool = False
+    ) -> Quadratic:
         """The penalised quadratic about coefficients (P,); `strict`: see `Problem.of`."""
         sums = self.rows.sweep(at, self.outcome, fisher=fisher, gram=gram)
-        return Problem.of(
+        kind = GroupedProblem if sums.layout.parts else Problem
+        return kind.of(
             sums, self.p, self.sizes, self.log_det_design, self.likelihood, strict=strict
         )
 
-    def at(self, smoothing: FloatArray, start: FloatArray) -> ModePoint:
+    def at(self, smoothing: FloatArray, start: FloatArray) -> Solution:
         """The mode at smoothing parameters λ, from a start (P,)."""
         ridge = np.concatenate([np.zeros(self.p), np.repeat(smoothing, self.sizes)])
         held = np.isinf(ridge)
@@ -77,7 +79,7 @@ class Modes:
                 break
         return self._point(beta, smoothing)
 
-    def _point(self, beta: FloatArray, smoothing: FloatArray) -> ModePoint:
+    def _point(self, beta: FloatArray, smoothing: FloatArray) -> Solution:
         """Newton's last steps, with the weights that A has; at the mode nothing moves any more."""
         for _ in range(LAST_STEPS):
             try:
@@ -86,54 +88,50 @@ class Modes:
             except np.linalg.LinAlgError:
                 # Observed weights can be negative far from the mode of a link not canonical.
                 point = self.quadratic(beta, fisher=True).at(smoothing)
+            sums = point.problem.sums
             before, beta = beta, point.coefficients()
             step = beta - before
-            if float(step @ point.problem.sums.gram @ step) <= MOVED * (
-                abs(point.deviance) + 1e-300
-            ):
+            length = float(step @ sums.gram.times(step, sums.layout))
+            if length <= MOVED * (abs(point.deviance) + 1e-300):
                 break
-        parts = {f.name: getattr(point, f.name) for f in fields(Point)}
-        return ModePoint(**parts, modes=self, mode=beta)
+        return replace(point, mode=WeightedMode(self, beta))
 
 
 @dataclass(frozen=True)
-class ModePoint(Point):
-    """The solution where the weights change with the mean."""
+class WeightedMode:
+    """The mode, where the weights change with the mean."""
 
     modes: Modes
-    mode: FloatArray  # (P,)
+    beta: FloatArray  # (P,)
 
-    def elsewhere(self, smoothing: FloatArray) -> Point:
-        return self.modes.at(smoothing, self.mode)
+    def elsewhere(self, smoothing: FloatArray) -> Solution:
+        """The mode at other smoothing parameters."""
+        return self.modes.at(smoothing, self.beta)
 
-    @cached_property
-    def moves(self) -> FloatArray:
+    def moves(self, solution: Solution) -> FloatArray:
         """∂β/∂ρ_j = −A⁻¹P_j β, A with the observed weights, all coefficients (P, blocks)."""
         if self.modes.expected and not self.modes.outcome.canonical:
-            return self.modes.quadratic(self.mode, fisher=False).at(self.smoothing).full_moves()
-        return super().full_moves()
+            observed = self.modes.quadratic(self.beta, fisher=False)
+            return observed.at(solution.smoothing).own_moves()
+        return solution.own_moves()
 
-    def full_moves(self) -> FloatArray:
-        return self.moves
-
-    def coefficient_moves(self) -> FloatArray:
-        return self.moves[self.problem.p + self.index]
-
-    @cached_property
-    def drift(self) -> FloatArray:
+    def drift(self, solution: Solution) -> FloatArray:
         """½ (Σ_i h_i w_i′ x_i)'∂β/∂ρ_j, h_i = x_i'A⁻¹x_i: one pass over the rows."""
         total = self.modes.rows.leverage_sweep(
-            self.mode, self.modes.outcome, self.covariance(), fisher=self.modes.expected
+            self.beta, self.modes.outcome, solution.posterior(), fisher=self.modes.expected
         )
-        return np.asarray(0.5 * total @ self.moves, dtype=np.float64)
+        return np.asarray(0.5 * total @ solution.full_moves, dtype=np.float64)
 
-    @cached_property
-    def tau_drift(self) -> FloatArray:
-        """Σ_i (x_i'Qx_i) w_i′ x_i'∂β/∂ρ_j, Q = A⁻¹ΛA⁻¹."""
-        inverse = self.covariance()
-        ridge = np.zeros(len(self.mode))
-        ridge[self.problem.p + self.index] = self.ridge
+    def tau_drift(self, solution: Solution) -> FloatArray:
+        """Σ_i (x_i'Qx_i) w_i′ x_i'∂β/∂ρ_j, Q = A⁻¹ΛA⁻¹; no group is set apart here."""
+        inverse = solution.posterior().dense
+        ridge = np.zeros(len(self.beta))
+        finite = np.where(np.isfinite(solution.smoothing), solution.smoothing, 0.0)
+        ridge[self.modes.p :] = np.repeat(finite, self.modes.sizes)
         total = self.modes.rows.leverage_sweep(
-            self.mode, self.modes.outcome, (inverse * ridge) @ inverse, fisher=True
+            self.beta,
+            self.modes.outcome,
+            Posterior.of_dense((inverse * ridge) @ inverse),
+            fisher=True,
         )
-        return np.asarray(total @ self.moves, dtype=np.float64)
+        return np.asarray(total @ solution.full_moves, dtype=np.float64)

@@ -8,16 +8,19 @@ disjoint ridges, criterion, gradient and Hessian need R only block by block.
 
 from __future__ import annotations
 
+from abc import ABC, abstractmethod
 from collections.abc import Sequence
-from dataclasses import dataclass, replace
+from dataclasses import dataclass, field, replace
 from functools import cached_property
 from itertools import pairwise
+from typing import Protocol
 
 import numpy as np
 import scipy.linalg
 from scipy.linalg.lapack import dpotrf, dpotri, dpotrs
 
 from addmodel.outcomes.likelihood import Likelihood
+from addmodel.posterior import Posterior
 from addmodel.rows.base import Sums
 from addmodel.spaces.base import FloatArray
 
@@ -28,9 +31,176 @@ SPANNED = 1e-10
 """What is left of a column's square, beside the unpenalised ones, when it counts as spanned."""
 
 
+class Mode(Protocol):
+    """What the solver must know of a solution about which the weights change with the mean."""
+
+    beta: FloatArray  # (P,)
+
+    def elsewhere(self, smoothing: FloatArray) -> Solution:
+        """The mode at other smoothing parameters."""
+
+    def moves(self, solution: Solution) -> FloatArray:
+        """∂β/∂ρ_j of all coefficients, (P, blocks), A with the observed weights."""
+
+    def drift(self, solution: Solution) -> FloatArray:
+        """½ d log|A|/dρ_j through the weights."""
+
+    def tau_drift(self, solution: Solution) -> FloatArray:
+        """dτ/dρ_j through the weights."""
+
+
+class Quadratic(ABC):
+    """A penalised quadratic: what the choice of smoothing parameters asks of it."""
+
+    sums: Sums
+    p: int
+    sizes: tuple[int, ...]  # of all blocks, those set apart last
+    curvature: FloatArray  # (q,) of each penalised coefficient, the unpenalised ones eliminated
+    origin: FloatArray  # (q,) the penalised coefficients of the sweep
+    pull: FloatArray  # (q,) score of the penalised coefficients there, the others eliminated
+    base: float  # deviance there, the others at their best
+    log_det_design: float  # log|T'T|, T the unpenalised columns without weights
+    likelihood: Likelihood
+
+    @property
+    def n(self) -> float:
+        """Rows, counts counted."""
+        return self.likelihood.n
+
+    @property
+    def spanned(self) -> list[bool]:
+        """For each block, whether the unpenalised columns leave nothing of it."""
+        whole = self.sums.gram.diagonal(self.sums.layout)[self.p :]
+        left = self.curvature > SPANNED * whole
+        return [not left[s].any() for s in self.slices]
+
+    @cached_property
+    def slices(self) -> list[slice]:
+        """Each block's place among the penalised coefficients."""
+        ends = np.cumsum([0, *self.sizes])
+        return [slice(int(a), int(b)) for a, b in pairwise(ends)]
+
+    @abstractmethod
+    def at(self, smoothing: FloatArray, *, strict: bool = False) -> Solution:
+        """Solve at smoothing parameters λ (one a block; infinite: the block is held at zero).
+
+        Where A is not positive definite (rounding; observed weights far from the mode) its
+        diagonal is lifted until it is, or, if strict, numpy.linalg.LinAlgError is raised.
+        """
+
+    @abstractmethod
+    def leading(self, counts: Sequence[int]) -> Quadratic:
+        """The problem with only the first functions of each block, for a quick look.
+
+        Costs and smoothing parameters are the smaller model's; its coefficients are not used.
+        """
+
+
 @dataclass(frozen=True)
-class Problem:
-    """A penalised quadratic, reduced to its penalised coefficients.
+class Solution(ABC):
+    """The solution at one value of the smoothing parameters."""
+
+    problem: Quadratic
+    smoothing: FloatArray  # (blocks,) λ, all blocks
+    blocks: list[int]  # those with finite λ
+    penalised_deviance: float  # D(β̂) + Σ λ ‖u‖², the minimum
+    mode: Mode | None = field(default=None, kw_only=True)
+    """Where the weights change with the mean, how."""
+
+    def elsewhere(self, smoothing: FloatArray) -> Solution:
+        """The solution at other smoothing parameters."""
+        return self.problem.at(smoothing) if self.mode is None else self.mode.elsewhere(smoothing)
+
+    @cached_property
+    def drift(self) -> FloatArray:
+        """½ d log|A|/dρ_j through the weights: nothing where they do not change with the mean."""
+        return np.zeros(len(self.blocks)) if self.mode is None else self.mode.drift(self)
+
+    @cached_property
+    def tau_drift(self) -> FloatArray:
+        """dτ/dρ_j through the weights."""
+        return np.zeros(len(self.blocks)) if self.mode is None else self.mode.tau_drift(self)
+
+    @cached_property
+    def full_moves(self) -> FloatArray:
+        """∂β/∂ρ_j of all coefficients, (P, blocks)."""
+        return self.own_moves() if self.mode is None else self.mode.moves(self)
+
+    @cached_property
+    def restricted_scale(self) -> float:
+        """φ as the restricted likelihood has it: known, or profiled."""
+        return self.problem.likelihood.scale(self.penalised_deviance, self.problem.p)
+
+    @property
+    def deviance(self) -> float:
+        """D(β̂)."""
+        return self.penalised_deviance - float(self.roughness.sum())
+
+    @property
+    def effective_df(self) -> float:
+        """τ = tr(A⁻¹X'WX), of the whole model."""
+        active = sum(self.problem.sizes[j] for j in self.blocks)
+        return self.problem.p + active - float(self.lost.sum())
+
+    @property
+    @abstractmethod
+    def log_det(self) -> float:
+        """log|A| of the active coefficients."""
+
+    @property
+    def log_ridge(self) -> float:
+        """Σ q_j log λ_j of the active blocks."""
+        return float(sum(self.problem.sizes[j] * np.log(self.smoothing[j]) for j in self.blocks))
+
+    @property
+    @abstractmethod
+    def roughness(self) -> FloatArray:
+        """λ_j ‖u_j‖² of each active block."""
+
+    @property
+    @abstractmethod
+    def lost(self) -> FloatArray:
+        """λ_j tr(A⁻¹)_jj of each active block: its functions less its effective ones."""
+
+    @property
+    @abstractmethod
+    def norms(self) -> FloatArray:
+        """λ_jλ_k ‖(A⁻¹)_jk‖² of each pair of active blocks."""
+
+    @property
+    @abstractmethod
+    def pull_products(self) -> FloatArray:
+        """λ_jλ_k u_j'(A⁻¹)_jk u_k of each pair of active blocks."""
+
+    @abstractmethod
+    def coefficients(self) -> FloatArray:
+        """All coefficients (P,); those of blocks held at zero are zero."""
+
+    @abstractmethod
+    def posterior(self) -> Posterior:
+        """A⁻¹ of all coefficients, rows and columns of blocks held at zero being zero."""
+
+    @abstractmethod
+    def own_moves(self) -> FloatArray:
+        """−A⁻¹P_jβ of all coefficients, (P, blocks): ∂β/∂ρ_j where A is that of the mode."""
+
+    def shrinkage(self, block: int) -> FloatArray:
+        """λ(A⁻¹)_kk of a block's coefficients: 0 is free, 1 is gone (as where it is held)."""
+        place = self.problem.slices[block]
+        size = self.problem.sizes[block]
+        if block not in self.blocks:
+            return np.ones(size)
+        return np.asarray(self.smoothing[block] * self.variances[place], dtype=np.float64)
+
+    @property
+    @abstractmethod
+    def variances(self) -> FloatArray:
+        """diag(A⁻¹) of the penalised coefficients, (q,); zero where they are held."""
+
+
+@dataclass(frozen=True)
+class Problem(Quadratic):
+    """A penalised quadratic, reduced to its penalised coefficients; no group is set apart.
 
     `sums` are over columns laid out as p unpenalised ones, then the blocks.
     """
@@ -63,9 +233,10 @@ class Problem:
         very different size; observed weights far from the mode) its diagonal is lifted until it
         is, or, if strict, numpy.linalg.LinAlgError is raised.
         """
-        factor = factored(sums.gram[:p, :p], strict=strict)
-        cross = scipy.linalg.cho_solve(factor, sums.gram[:p, p:])
-        schur = sums.gram[p:, p:] - sums.gram[p:, :p] @ cross
+        gram = sums.gram.dense
+        factor = factored(gram[:p, :p], strict=strict)
+        cross = scipy.linalg.cho_solve(factor, gram[:p, p:])
+        schur = gram[p:, p:] - gram[p:, :p] @ cross
         return cls(
             sums=sums,
             p=p,
@@ -80,23 +251,10 @@ class Problem:
             likelihood=likelihood,
         )
 
-    @property
-    def n(self) -> float:
-        """Rows, counts counted."""
-        return self.likelihood.n
-
-    @property
-    def spanned(self) -> list[bool]:
-        """For each block, whether the unpenalised columns leave nothing of it."""
-        whole = np.diag(self.sums.gram)[self.p :]
-        left = np.diag(self.schur) > SPANNED * whole
-        return [not left[s].any() for s in self.slices]
-
     @cached_property
-    def slices(self) -> list[slice]:
-        """Each block's place among the penalised coefficients."""
-        ends = np.cumsum([0, *self.sizes])
-        return [slice(int(a), int(b)) for a, b in pairwise(ends)]
+    def curvature(self) -> FloatArray:  # type: ignore[override]
+        """Diagonal of S."""
+        return np.diag(self.schur).copy()
 
     def active(self, smoothing: FloatArray) -> tuple[list[int], IndexArray]:
         """Blocks with a finite smoothing parameter, and the indices of their coefficients."""
@@ -105,10 +263,6 @@ class Problem:
         return blocks, np.concatenate(index) if index else np.empty(0, dtype=np.int64)
 
     def leading(self, counts: Sequence[int]) -> Problem:
-        """The problem with only the first functions of each block, for a quick look.
-
-        Costs and smoothing parameters are the smaller model's; its coefficients are not used.
-        """
         index = np.concatenate(
             [np.arange(s.start, s.start + k) for s, k in zip(self.slices, counts, strict=True)]
         )
@@ -121,11 +275,6 @@ class Problem:
         )
 
     def at(self, smoothing: FloatArray, *, strict: bool = False) -> Point:
-        """Solve at smoothing parameters λ (one a block; infinite: the block is held at zero).
-
-        Where S + Λ is not positive definite (rounding; observed weights far from the mode) its
-        diagonal is lifted until it is, or, if strict, numpy.linalg.LinAlgError is raised.
-        """
         blocks, index = self.active(smoothing)
         sizes = [self.sizes[j] for j in blocks]
         ridge = np.repeat(smoothing[blocks], sizes)
@@ -134,7 +283,7 @@ class Problem:
         base += float(ridge @ start**2)
         pull = pull - ridge * start
         if len(index) == 0:
-            return Point(self, smoothing, blocks, ridge, index, np.empty((0, 0)), pull, base)
+            return Point(self, smoothing, blocks, base, ridge, index, np.empty((0, 0)), pull)
         every = len(index) == len(self.origin)
         matrix = self.schur.copy() if every else self.schur[np.ix_(index, index)]
         matrix[np.diag_indices_from(matrix)] += ridge
@@ -145,7 +294,7 @@ class Problem:
             factor = lifted(matrix)
         step, _ = dpotrs(factor, pull, lower=1)
         low = base - float(pull @ step)
-        return Point(self, smoothing, blocks, ridge, index, factor, start + step, low)
+        return Point(self, smoothing, blocks, low, ridge, index, factor, start + step)
 
     def started(self, index: IndexArray) -> tuple[FloatArray, FloatArray, float]:
         """Origin, pull and base with the coefficients outside `index` moved to zero."""
@@ -177,53 +326,23 @@ def factored(matrix: FloatArray, *, strict: bool = False) -> tuple[FloatArray, b
 
 
 @dataclass(frozen=True)
-class Point:
+class Point(Solution):
     """The solution at one value of the smoothing parameters; one factorisation serves it all."""
 
     problem: Problem
-    smoothing: FloatArray  # (blocks,) λ, all blocks
-    blocks: list[int]  # those with finite λ
     ridge: FloatArray  # (k,) λ of each active coefficient
     index: IndexArray
     factor: FloatArray  # (k, k) lower Cholesky factor of S + Λ
     u: FloatArray  # (k,)
-    penalised_deviance: float  # D(β̂) + Σ λ ‖u‖², the minimum
-
-    def elsewhere(self, smoothing: FloatArray) -> Point:
-        """The solution at other smoothing parameters."""
-        return self.problem.at(smoothing)
 
     @property
-    def drift(self) -> FloatArray:
-        """½ d log|A|/dρ_j through the weights: nothing where they do not change with the mean."""
-        return np.zeros(len(self.blocks))
-
-    @property
-    def tau_drift(self) -> FloatArray:
-        """dτ/dρ_j through the weights."""
-        return np.zeros(len(self.blocks))
-
-    def full_moves(self) -> FloatArray:
-        """∂β/∂ρ_j of all coefficients, (P, blocks)."""
-        pushes = np.zeros((len(self.problem.sums.at), len(self.blocks)))
-        pushes[self.problem.p + self.index] = self.by_block()
-        moves: FloatArray = -self.covariance() @ pushes
-        return moves
+    def log_det(self) -> float:
+        schur = 2 * float(np.log(np.diag(self.factor)).sum())
+        return self.problem.log_det_unpenalised + schur
 
     def coefficient_moves(self) -> FloatArray:
-        """∂u/∂ρ_j = −A⁻¹P_j β of the active coefficients, (k, blocks)."""
-        moves: FloatArray = -self.inverse @ self.by_block()
-        return moves
-
-    @cached_property
-    def restricted_scale(self) -> float:
-        """φ as the restricted likelihood has it: known, or profiled."""
-        return self.problem.likelihood.scale(self.penalised_deviance, self.problem.p)
-
-    @property
-    def log_det_schur(self) -> float:
-        """log|S + Λ|."""
-        return 2 * float(np.log(np.diag(self.factor)).sum())
+        """∂β/∂ρ_j of the active penalised coefficients, (k, blocks)."""
+        return self.full_moves[self.problem.p + self.index]
 
     @cached_property
     def inverse(self) -> FloatArray:
@@ -243,29 +362,39 @@ class Point:
 
     @property
     def roughness(self) -> FloatArray:
-        """λ_j ‖u_j‖² of each active block."""
         squares = self.ridge * self.u**2
         return np.array([squares[s].sum() for s in self.places])
 
     @property
-    def deviance(self) -> float:
-        """D(β̂)."""
-        return self.penalised_deviance - float(self.roughness.sum())
-
-    @property
-    def shrinkage(self) -> FloatArray:
-        """λ (A⁻¹)_kk of each active coefficient: 0 is free, 1 is gone."""
-        return self.ridge * np.diag(self.inverse)
-
-    @property
     def lost(self) -> FloatArray:
-        """λ_j tr(A⁻¹)_jj of each active block: its functions less its effective ones."""
-        return np.array([self.shrinkage[s].sum() for s in self.places])
+        shrunk = self.ridge * np.diag(self.inverse)
+        return np.array([shrunk[s].sum() for s in self.places])
 
     @property
-    def effective_df(self) -> float:
-        """τ = tr(A⁻¹X'WX), of the whole model."""
-        return self.problem.p + len(self.u) - float(self.lost.sum())
+    def norms(self) -> FloatArray:
+        lam = self.smoothing[self.blocks]
+        return np.outer(lam, lam) * self.block_sums(self.inverse, self.inverse)
+
+    @property
+    def pull_products(self) -> FloatArray:
+        pushes = self.by_block()
+        products: FloatArray = pushes.T @ self.inverse @ pushes
+        return products
+
+    def own_moves(self) -> FloatArray:
+        pushes = np.zeros((len(self.problem.sums.at), len(self.blocks)))
+        pushes[self.problem.p + self.index] = self.by_block()
+        moves: FloatArray = -self.covariance() @ pushes
+        return moves
+
+    @property
+    def variances(self) -> FloatArray:
+        variances = np.zeros(len(self.problem.origin))
+        variances[self.index] = np.diag(self.inverse)
+        return variances
+
+    def posterior(self) -> Posterior:
+        return Posterior.of_dense(self.covariance())
 
     def block_sums(self, left: FloatArray, right: FloatArray) -> FloatArray:
         """Σ of left∘right over each pair of active blocks."""
@@ -283,20 +412,21 @@ class Point:
         return pushes
 
     def coefficients(self) -> FloatArray:
-        """All coefficients (P,); those of blocks held at zero are zero."""
+        if self.mode is not None:
+            return self.mode.beta
         problem, p = self.problem, self.problem.p
         target = np.zeros_like(problem.sums.at)
         target[p + self.index] = self.u
         target[:p] = problem.sums.at[:p]
         moved = problem.sums.moved(target)
-        factor = factored(problem.sums.gram[:p, :p])
+        factor = factored(problem.sums.gram.dense[:p, :p])
         target[:p] += scipy.linalg.cho_solve(factor, moved.score[:p], check_finite=False)
         return target
 
     def covariance(self) -> FloatArray:
         """A⁻¹ (P, P), rows and columns of blocks held at zero being zero."""
         problem, p = self.problem, self.problem.p
-        gram = problem.sums.gram
+        gram = problem.sums.gram.dense
         full = np.zeros_like(gram)
         used = p + self.index
         factor = factored(gram[:p, :p])

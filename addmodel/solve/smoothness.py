@@ -18,7 +18,7 @@ import scipy.optimize
 from addmodel.errors import ModelError
 from addmodel.solve.criteria import Criterion
 from addmodel.solve.pirls import Modes
-from addmodel.solve.quadratic import IndexArray, Point, Problem
+from addmodel.solve.quadratic import IndexArray, Quadratic, Solution
 from addmodel.spaces.base import FloatArray
 
 STEPS = 100
@@ -47,7 +47,7 @@ RANGE = 1e-9
 class Smoothness:
     """Chosen smoothing parameters, and how the choice went."""
 
-    point: Point
+    point: Solution
     steps: int
     settled: bool
     gradient: FloatArray  # (blocks,) of the cost in log λ; zero for those fixed or at infinity
@@ -63,8 +63,8 @@ class Bounds:
     upper: FloatArray
 
     @classmethod
-    def of(cls, problem: Problem) -> Bounds:
-        diagonal = np.diag(problem.schur)
+    def of(cls, problem: Quadratic) -> Bounds:
+        diagonal = problem.curvature
         small = np.array([diagonal[s].min() for s in problem.slices])
         large = np.array([diagonal[s].max() for s in problem.slices])
         # Below the rounding of S itself, S + Λ need not be positive definite.
@@ -74,7 +74,7 @@ class Bounds:
 
 
 def choose(
-    problem: Problem,
+    problem: Quadratic,
     criterion: Criterion,
     fixed: Sequence[float | None],
     degrees: Sequence[float | None],
@@ -111,7 +111,7 @@ def choose(
     return found
 
 
-def ridge_reaching(problem: Problem, smoothing: FloatArray, block: int, target: float) -> float:
+def ridge_reaching(problem: Quadratic, smoothing: FloatArray, block: int, target: float) -> float:
     """λ of a block that gives it `target` effective degrees of freedom beside the others."""
 
     def excess(rho: float) -> float:
@@ -149,7 +149,7 @@ def choose_mode(
         working = choose(modes.quadratic(beta, fisher=True), criterion, fixed, degrees)
         steps += working.steps
         point = modes.at(working.point.smoothing, beta)
-        beta = point.mode
+        beta = point.coefficients()
         if smoothing is not None and _close(point.smoothing, smoothing):
             break
         smoothing = point.smoothing
@@ -169,7 +169,7 @@ def choose_mode(
     return replace(best, steps=steps)
 
 
-def choose_free(problem: Problem, criterion: Criterion, given: FloatArray) -> Smoothness:
+def choose_free(problem: Quadratic, criterion: Criterion, given: FloatArray) -> Smoothness:
     """The optimum, nearly (see ROUGHLY); `given` holds NaN where a parameter is to be chosen."""
     free = np.flatnonzero(np.isnan(given))
     if len(free) == 0:
@@ -198,15 +198,17 @@ def choose_free(problem: Problem, criterion: Criterion, given: FloatArray) -> Sm
     return replace(best, steps=steps)
 
 
-def polish(found: Smoothness, point: Point, criterion: Criterion, free: IndexArray) -> Smoothness:
+def polish(
+    found: Smoothness, point: Solution, criterion: Criterion, free: IndexArray
+) -> Smoothness:
     """Newton to the end from a solution nearly found, here at `point`."""
     again = newton(point, criterion, free)
     return replace(again, steps=found.steps + again.steps - 1)
 
 
 def quick_look(
-    problem: Problem, criterion: Criterion, free: IndexArray, given: FloatArray
-) -> tuple[Problem, list[FloatArray]]:
+    problem: Quadratic, criterion: Criterion, free: IndexArray, given: FloatArray
+) -> tuple[Quadratic, list[FloatArray]]:
     """A smaller problem to compare starts on, and the starts: each block at the best place of its
     own, all with little smoothing, and, where a criterion has many optima, some in between.
 
@@ -220,7 +222,7 @@ def quick_look(
     counts = list(problem.sizes)
     # More starts where optima are many, or where they cost little.
     many = criterion.rough_optima or len(problem.pull) <= CHEAP
-    diagonal = np.maximum(np.diag(problem.schur), np.finfo(float).tiny)
+    diagonal = np.maximum(problem.curvature, np.finfo(float).tiny)
     for j in free.tolist():
         place, size = problem.slices[j], problem.sizes[j]
         d, v = diagonal[place], problem.pull[place] + diagonal[place] * problem.origin[place]
@@ -247,12 +249,12 @@ def half_shrunk(d: FloatArray, count: float) -> float:
     return float(max(np.sort(d)[::-1][int(count)], np.finfo(float).tiny))
 
 
-def ridges_for(problem: Problem, block: int, targets: Sequence[float] | FloatArray) -> FloatArray:
+def ridges_for(problem: Quadratic, block: int, targets: Sequence[float] | FloatArray) -> FloatArray:
     """λ that give a block alone about these effective degrees of freedom: Σ d/(d + λ) = target,
 
     d the block's own curvatures; by bisection in log λ.
     """
-    d = np.maximum(np.diag(problem.schur)[problem.slices[block]], np.finfo(float).tiny)
+    d = np.maximum(problem.curvature[problem.slices[block]], np.finfo(float).tiny)
     low = np.full(len(targets), np.log(d.min()) - 20)
     high = np.full(len(targets), np.log(d.max()) + 20)
     for _ in range(20):
@@ -263,7 +265,7 @@ def ridges_for(problem: Problem, block: int, targets: Sequence[float] | FloatArr
 
 
 def newton(
-    point: Point,
+    point: Solution,
     criterion: Criterion,
     free: IndexArray,
     tolerance: float = EXACTLY,
@@ -334,8 +336,8 @@ def descent(gradient: FloatArray, hessian: FloatArray) -> FloatArray:
 
 
 def hold_at_infinity(
-    point: Point, cost: float, criterion: Criterion, free: IndexArray
-) -> tuple[Point, float]:
+    point: Solution, cost: float, criterion: Criterion, free: IndexArray
+) -> tuple[Solution, float]:
     """Move blocks that are all but gone to λ = ∞, where that does not cost anything."""
     while True:
         sizes = np.array([point.problem.sizes[j] for j in point.blocks])
@@ -358,7 +360,7 @@ def hold_at_infinity(
 
 
 def look_around(
-    point: Point, quick: Problem, criterion: Criterion, free: IndexArray
+    point: Solution, quick: Quadratic, criterion: Criterion, free: IndexArray
 ) -> FloatArray | None:
     """Each smoothing parameter alone over its whole range: a better place, or None.
 
@@ -373,7 +375,7 @@ def look_around(
         targets = [2.0, 5.0, 10.0, 20.0, 40.0] if criterion.rough_optima else [1.0, 8.0]
         smooth = ridges_for(quick, j, [t for t in targets if t < 0.5 * size])
         trials = [(quick, now, lam) for lam in (np.inf, *smooth)]
-        rough = half_shrunk(np.diag(full.schur)[full.slices[j]], 0.6 * full.sizes[j])
+        rough = half_shrunk(full.curvature[full.slices[j]], 0.6 * full.sizes[j])
         wide = full.leading([full.sizes[i] if i == j else k for i, k in enumerate(quick.sizes)])
         trials.append((wide, criterion.cost(wide.at(point.smoothing)), rough))
         for problem, before, lam in trials:
@@ -389,7 +391,7 @@ def look_around(
 
 
 def _result(
-    point: Point,
+    point: Solution,
     criterion: Criterion,
     free: IndexArray,
     bounds: Bounds,

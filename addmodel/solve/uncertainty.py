@@ -10,8 +10,7 @@ from __future__ import annotations
 import numpy as np
 
 from addmodel.solve.criteria import Criterion
-from addmodel.solve.pirls import ModePoint
-from addmodel.solve.quadratic import Point
+from addmodel.solve.quadratic import Solution
 from addmodel.spaces.base import FloatArray
 
 STEP = 1e-3
@@ -20,14 +19,14 @@ FLAT = 1e-6
 
 
 def smoothing_spread(
-    point: Point, criterion: Criterion, free: list[int]
+    point: Solution, criterion: Criterion, free: list[int]
 ) -> tuple[FloatArray, FloatArray]:
     """J V_ρ^½ (P, k) and V_ρ^½ (blocks, k): times their transposes they are V' and V_ρ.
 
     No columns where nothing was chosen.
     """
     chosen = [i for i, j in enumerate(point.blocks) if j in free]
-    moves = point.full_moves()[:, chosen]
+    moves = point.full_moves[:, chosen]
     if criterion.name != "reml" or not chosen:
         return moves[:, :0], np.zeros((len(point.smoothing), 0))
     hessian = _exact_hessian(point, criterion, chosen)
@@ -39,9 +38,9 @@ def smoothing_spread(
     return moves @ root, every
 
 
-def _exact_hessian(point: Point, criterion: Criterion, chosen: list[int]) -> FloatArray:
+def _exact_hessian(point: Solution, criterion: Criterion, chosen: list[int]) -> FloatArray:
     """The criterion's Hessian; where weights change with the mean, differences of the gradient."""
-    if not isinstance(point, ModePoint):
+    if point.mode is None:
         return criterion.hessian(point)[np.ix_(chosen, chosen)]
     rows = []
     for i in chosen:

@@ -10,14 +10,14 @@ import numpy.typing as npt
 import scipy.fft
 import scipy.linalg
 
-from addmodel.spaces.base import (
-    BoolArray,
-    FloatArray,
-    Penalised,
+from addmodel.spaces.base import BoolArray, FloatArray, support
+from addmodel.spaces.spline import (
+    FEWEST_KNOTS,
+    KNOTS,
+    Spline,
     choose_knots,
     demmler_reinsch,
     hermite,
-    support,
 )
 
 GAP = 0.2
@@ -25,7 +25,7 @@ GAP = 0.2
 
 
 @dataclass(frozen=True)
-class Cycle(Penalised):
+class Cycle(Spline):
     """Periodic splines; the null space is the constant alone, so nothing is unpenalised."""
 
     period: float | str
@@ -49,21 +49,22 @@ class Cycle(Penalised):
         size = max(2, size - size % 2) if cap is not None else size + size % 2
         size = min(size, len(points) - 1)
         turn = np.append(points, points[0] + 1.0)
-        knots = choose_knots(turn, np.append(omega, omega[0]), max(96, int(1.6 * size)))
+        knots = choose_knots(turn, np.append(omega, omega[0]), max(FEWEST_KNOTS, int(KNOTS * size)))
         r = len(knots)
         constant = np.repeat([1.0, 0.0], r)[:, None]
-        columns, gamma = demmler_reinsch(hermite(knots, points), periodic(knots), constant, omega)
+        functions, gamma = demmler_reinsch(
+            hermite(knots, points), periodic(knots), constant, omega, r - 1
+        )
         return cls(
-            key=key,
-            low=0.0,
-            length=1.0 if isinstance(period, str) else float(period),
+            keys=(key,),
             distinct=len(points),
-            size_kept=min(size, len(gamma)),
-            knots=knots,
-            value=columns[:r],
-            slope=columns[r:],
             gamma=gamma,
             cap=cap,
+            low=0.0,
+            length=1.0 if isinstance(period, str) else float(period),
+            order=2,
+            knots=knots,
+            functions=functions,
             period=period,
             gap=_longest_gap(points),
         )
@@ -73,6 +74,9 @@ class Cycle(Penalised):
         return ()
 
     def unpenalised(self, x: npt.NDArray[Any]) -> FloatArray:
+        return np.empty((len(x), 0))
+
+    def null(self, x: npt.NDArray[Any]) -> FloatArray:
         return np.empty((len(x), 0))
 
     def outside(self, x: npt.NDArray[Any]) -> BoolArray:

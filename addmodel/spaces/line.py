@@ -21,7 +21,7 @@ class Line(Space):
     @classmethod
     def lay(cls, key: str, x: FloatArray) -> Line:
         """Lay the space on the data: x is (n,)."""
-        return cls(key, float(x.min()), float(x.max()))
+        return cls((key,), float(x.min()), float(x.max()))
 
     @property
     def unpenalised_names(self) -> tuple[str, ...]:
@@ -29,6 +29,10 @@ class Line(Space):
 
     def unpenalised(self, x: npt.NDArray[Any]) -> FloatArray:
         return np.asarray(x, dtype=np.float64)[:, None]
+
+    def null(self, x: npt.NDArray[Any]) -> FloatArray:
+        """The number unscaled: a varying coefficient keeps its units."""
+        return self.unpenalised(x)
 
     def outside(self, x: npt.NDArray[Any]) -> BoolArray:
         beyond: BoolArray = (x < self.low) | (x > self.high)
