@@ -72,6 +72,7 @@ def _assembled(model: Model, table: Table, sizes: Mapping[tuple[int, int], int] 
     components = []
     seen = Seen(values, len(weights))
     for j, component in enumerate(bare):
+        _check_df(component, model, j)
         first = [_first_count(b, component.spaces, len(weights), bending) for b in component.blocks]
         counts = [
             min(
@@ -250,6 +251,23 @@ def first_size(distinct: int, n: int, bending: int, order: int = 2) -> int:
     if distinct <= 200:
         return min(distinct, max(60, SHARED // max(bending, 1)))
     return max(60, int(np.ceil(4 * n ** (2 / (4 * order + 1)))))
+
+
+def _check_df(component: Component, model: Model, j: int) -> None:
+    """df= lies between the unpenalised columns and all that the distinct points allow."""
+    for block in component.blocks:
+        if block.df is None:
+            continue
+        (factor,) = block.bends
+        space = component.spaces[factor]
+        least = len(space.unpenalised_names)
+        if not least < block.df < least + space.most:
+            raise FormulaError(
+                f"{component.name} can have between {least} and {least + space.most} effective "
+                f"degrees of freedom on these data, so df={block.df:g} is out of reach.",
+                model.text,
+                model.terms[j].factors[factor].span,
+            )
 
 
 def _first_count(block: Block, spaces: Sequence[Space], n: int, bending: int) -> int:

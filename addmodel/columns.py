@@ -7,6 +7,7 @@ in the data as read, counted from 0.
 from __future__ import annotations
 
 import re
+from collections import Counter
 from collections.abc import Callable, Iterable, Iterator, Mapping
 from dataclasses import dataclass, replace
 from decimal import Decimal
@@ -245,7 +246,7 @@ def distinct_levels(name: str, values: Series) -> tuple[IntArray, tuple[str, ...
         If two categories, such as 1 and "1", share a label.
     """
     codes, labels = level_codes(values)
-    twice = sorted({label for label in labels if labels.count(label) > 1})
+    twice = sorted(label for label, count in Counter(labels).items() if count > 1)
     if twice:
         raise DataError(f"{name}: several categories have the label '{twice[0]}'.")
     return codes, labels

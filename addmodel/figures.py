@@ -304,8 +304,8 @@ def _paint_levels(panel: Panel, ax: Axes, limits: Limits, width: float) -> None:
 
 def _level_labels(panel: Panel, width: float) -> list[str]:
     """Labels in lines that fit a panel `width` mm wide; very long ones lose their middle."""
-    wrapped = [wrapped(label, 0.36 * width, ROW) for label in panel.labels]
-    return ["\n".join(w if len(w) <= 3 else [*w[:2], "… " + w[-1]]) for w in wrapped]
+    lines = [wrapped(label, 0.36 * width, ROW) for label in panel.labels]
+    return ["\n".join(w if len(w) <= 3 else [*w[:2], "… " + w[-1]]) for w in lines]
 
 
 def _height(panel: Panel, width: float) -> float:

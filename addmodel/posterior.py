@@ -78,9 +78,8 @@ class Posterior:
         products = []
         for vector in vectors.T:
             apart = layout.by_level(vector)
-            first = self.dense @ (
-                vector[: layout.dense] - np.einsum("lbd,lb->d", self.bridge, apart)
-            )
+            pulled = self.bridge.reshape(-1, layout.dense).T @ apart.ravel()
+            first = self.dense @ (vector[: layout.dense] - pulled)
             theirs = np.einsum("lbc,lc->lb", self.own, apart) - self.bridge @ first
             products.append(np.concatenate([first, layout.flat(theirs)]))
         return np.array(products).reshape(-1, layout.total).T
@@ -89,7 +88,7 @@ class Posterior:
         """(P,)."""
         if not self.layout.parts:
             return np.diag(self.dense).copy()
-        crossed = np.einsum("lbd,lbd->lb", self.bridge @ self.dense, self.bridge)
+        crossed = ((self.bridge @ self.dense) * self.bridge).sum(axis=2)
         own = np.diagonal(self.own, axis1=1, axis2=2) + crossed
         return np.concatenate([np.diag(self.dense), self.layout.flat(own)])
 

@@ -4,7 +4,7 @@ from pathlib import Path
 
 import numpy as np
 
-from addmodel.component import Design
+from addmodel.assembly import assemble
 from addmodel.data import read
 from addmodel.formula import parse
 from addmodel.laid import Laid
@@ -27,5 +27,5 @@ def problem_for(formula: str, data: object) -> Problem:
     model = parse(formula)
     table = read(data, model)
     outcome = outcome_for("gaussian")
-    laid = Laid.on(Design.lay(model, table), table, outcome, CRITERIA["reml"], 1.0)
+    laid = Laid.on(assemble(model, table), table, outcome, CRITERIA["reml"], 1.0)
     return laid.modes.quadratic(laid.start, fisher=True)

@@ -80,7 +80,7 @@ def test_nothing_left_over_in_pure_noise(kind, name):
         space = Curve.lay("x", x, weights, 60, None)
     else:
         space = Cycle.lay("x", x, weights, 60, None, 1.0)
-    columns = np.column_stack([np.ones(len(x)), space.unpenalised(x), space.penalised(x)])
+    columns = np.column_stack([np.ones(len(x)), space.unpenalised(x), space.penalised(x, 60)])
     root = np.sqrt(weights)[:, None]
     basis = np.linalg.qr(root * columns)[0]
     rng = np.random.default_rng(4)
@@ -88,7 +88,7 @@ def test_nothing_left_over_in_pure_noise(kind, name):
     for _ in range(300):
         noise = rng.standard_normal(len(x))
         residuals = (noise - basis @ (basis.T @ noise)) / root[:, 0]
-        hits += left_over(space, x, residuals, weights, 1.0) is not None
+        hits += left_over(space, 60, x, residuals, weights, 1.0) is not None
     assert hits <= 3  # 0.3 expected
 
 
@@ -102,7 +102,7 @@ def test_what_is_left_over_is_found_in_its_band(kind):
     else:
         space = Cycle.lay("x", x, np.ones(n), 60, None, 1.0)
     residuals = 0.3 * np.sin(2 * np.pi * 55 * x) + rng.standard_normal(n)  # 110 half waves
-    assert left_over(space, x, residuals, np.ones(n), 1.0) == 135  # the band from 90 to 135
+    assert left_over(space, 60, x, residuals, np.ones(n), 1.0) == 135  # the band from 90 to 135
 
 
 @pytest.mark.parametrize(("n", "cycles"), [(800, 22), (900, 28)])

@@ -111,7 +111,7 @@ def test_corrected_degrees_of_freedom_against_differences_of_cholesky_factors():
         near = am.fit(
             f"y ~ curve(x, detail=20, smoothing={a}) + curve(z, detail=20, smoothing={b})", data
         ).estimate
-        return np.linalg.cholesky(near.covariance / near.scale), near.coefficients
+        return np.linalg.cholesky(near.posterior.dense / near.scale), near.coefficients
 
     h, roots, moves = 1e-4, [], []
     for k in range(2):
@@ -122,7 +122,7 @@ def test_corrected_degrees_of_freedom_against_differences_of_cholesky_factors():
         roots.append((root_up - root_down) / (2 * h))
         moves.append((beta_up - beta_down) / (2 * h))
     spread = estimate.smoothing_root @ estimate.smoothing_root.T
-    information = np.linalg.inv(estimate.covariance / estimate.scale)
+    information = np.linalg.inv(estimate.posterior.dense / estimate.scale)
     for place, lam in zip(estimate.design.block_places, estimate.smoothing, strict=True):
         information[place, place] -= lam * np.eye(place.stop - place.start)
     gain = sum(

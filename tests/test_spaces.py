@@ -3,11 +3,16 @@
 import numpy as np
 import pytest
 
-from addmodel.spaces.base import Penalised, Space, choose_knots, hermite, support
-from addmodel.spaces.curve import Curve
+from addmodel.spaces.base import Penalised, Space, support
+from addmodel.spaces.curve import Curve, bent, integrated
 from addmodel.spaces.cycle import Cycle, phase
+from addmodel.spaces.globe import Globe, wahba
+from addmodel.spaces.group import Group
 from addmodel.spaces.levels import Levels
 from addmodel.spaces.line import Line
+from addmodel.spaces.place import Place
+from addmodel.spaces.scattered import Scattered
+from addmodel.spaces.spline import Spline, choose_knots, hermite
 
 # Roots of cos β cosh β = 1: vibration of a free-free beam (Blevins 1979, Formulas for Natural
 # Frequency and Mode Shape, table of single-span beams).
@@ -35,22 +40,30 @@ def laid(kind: type[Space], x: np.ndarray, weights: np.ndarray, size: int = 30) 
     if kind is Levels:
         labels, codes = np.unique(np.floor(3 * x / np.ptp(x)), return_inverse=True)
         return Levels.lay("x", codes, weights, tuple(str(v) for v in labels), 0)
+    if kind is Group:
+        codes = values_for(kind, x)
+        return Group.lay(("x",), codes, (tuple(str(v) for v in range(codes.max() + 1)),))
+    if kind in (Place, Globe):
+        return kind.lay(("x", "z"), values_for(kind, x), weights, None, True)
     return Line.lay("x", x)
 
 
-KINDS: list[type[Space]] = [Line, Levels, Curve, Cycle]
+KINDS: list[type[Space]] = [Line, Levels, Curve, Cycle, Place, Globe, Group]
 
 
 def test_no_space_escapes_the_laws():
     def below(kind):
         return {k for sub in kind.__subclasses__() for k in {sub, *below(sub)}}
 
-    assert below(Space) - {Penalised} == set(KINDS)
+    assert below(Space) - {Penalised, Spline, Scattered} == set(KINDS)
 
 
-def values_for(space: Space, x: np.ndarray) -> np.ndarray:
-    if isinstance(space, Levels):
+def values_for(kind: type[Space], x: np.ndarray) -> np.ndarray:
+    if kind in (Levels, Group):
         return np.unique(np.floor(3 * x / np.ptp(x)), return_inverse=True)[1]
+    if kind in (Place, Globe):  # two coordinates a row, within a globe's degrees
+        u = 80 * (x - x.min()) / np.ptp(x)
+        return np.column_stack([u, np.random.default_rng(6).uniform(-170, 170, len(x))])
     return x
 
 
@@ -60,7 +73,7 @@ def test_laws(kind, name):
     x = covariate(name)
     weights = np.random.default_rng(5).uniform(0.2, 3, len(x))
     space = laid(kind, x, weights)
-    seen = values_for(space, x)
+    seen = values_for(kind, x)
     straight, bent = space.unpenalised(seen), space.penalised(seen)
     assert straight.shape == (len(x), len(space.unpenalised_names))
     assert bent.shape == (len(x), space.size)
@@ -68,19 +81,28 @@ def test_laws(kind, name):
     assert np.isfinite(bent).all()
     # Row i depends on x[i] only.
     some = np.array([7, 3, 250])
-    np.testing.assert_array_equal(space.unpenalised(seen[some]), straight[some])
-    np.testing.assert_array_equal(space.penalised(seen[some]), bent[some])
+    for columns in (space.unpenalised, space.null, space.penalised):
+        every, alone = columns(seen), columns(seen[some])
+        # To the rounding of sums that may be taken in another order.
+        np.testing.assert_allclose(alone, every[some], atol=1e-13 * np.abs(every).max(initial=1))
+    np.testing.assert_allclose(space.penalised(seen, 3), bent[:, :3], atol=1e-13)
     assert not space.outside(seen).any()
+    if straight.shape[1]:  # null spans what unpenalised spans beside the constant
+        ones = np.ones((len(x), 1))
+        for a, b in ((straight, space.null(seen)), (space.null(seen), straight)):
+            base = np.linalg.qr(np.concatenate([ones, a], axis=1))[0]
+            left = b - base @ (base.T @ b)
+            assert np.abs(left).max() < 1e-9 * np.abs(b).max()
     if not isinstance(space, Penalised):
         return
-    gamma = space.gamma[: space.size]
+    kept = min(30, space.size)
+    bent, gamma = bent[:, :kept], space.gamma[:kept]
     assert (np.diff(gamma) >= -1e-9 * gamma[1:]).all()
     share = weights / weights.sum()
     phi = bent * np.sqrt(gamma)
-    np.testing.assert_allclose(phi.T @ (share[:, None] * phi), np.eye(space.size), atol=1e-8)
+    np.testing.assert_allclose(phi.T @ (share[:, None] * phi), np.eye(kept), atol=1e-8)
     null = np.column_stack([np.ones(len(x)), straight / np.sqrt(share @ straight**2 + 1e-300)])
     assert np.abs(null.T @ (share[:, None] * phi)).max() < 1e-8
-    np.testing.assert_array_equal(space.keep(5).penalised(seen), bent[:, :5])
 
 
 @pytest.mark.parametrize("name", ["random", "ties", "lognormal"])
@@ -91,8 +113,9 @@ def test_roughness_is_the_integral(kind, name):
     space = laid(kind, x, np.ones(len(x)), 12)
     knots = space.knots
     h = np.diff(knots)[:, None]
-    rise = np.diff(space.value, axis=0)
-    left, right = space.slope[:-1], space.slope[1:]
+    value, slope = np.split(space.functions, 2)
+    rise = np.diff(value, axis=0)
+    left, right = slope[:-1], slope[1:]
     # f'' is linear between knots: its ends from the Hermite data.
     start = (6 * rise / h - 4 * left - 2 * right) / h
     stop = (-6 * rise / h + 2 * left + 4 * right) / h

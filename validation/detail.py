@@ -23,7 +23,7 @@ def main() -> None:
             [
                 f"random model {seed}, curves: {len(components)}",
                 len(difference),
-                ", ".join(str(c.spaces[0].size) for c in components),
+                ", ".join(str(len(b.functions)) for c in components for b in c.blocks),
                 f"{fit.effective_df:.2f} (all: {full.effective_df:.2f})",
                 f"{100 * worst:.2f} % of a standard error",
             ]
@@ -35,7 +35,7 @@ def main() -> None:
             fit = am.fit("y ~ curve(x)", data)
             wave = np.sin(2 * np.pi * cycles * data["x"])
             found += np.corrcoef(fit.fitted, wave)[0, 1] > 0.9
-            kept.append(fit.estimate.design.components[0].spaces[0].size)
+            kept.append(fit.estimate.design.components[0].blocks[0].size)
             df.append(fit.effective_df)
         rows.append(
             [

@@ -50,7 +50,7 @@ LINKS = (
     links.LogC,
 )
 KNOWN_SCALE = ("Binomial", "Poisson", "NegativeBinomial")
-LEAST_WEIGHT = 1e-10
+LEAST_WEIGHT = 1e-8
 """Working weight per prior weight of a count or yes/no row that is all but decided: under
 separation coefficients run off until their rows weigh so little, and stop there."""
 

@@ -32,7 +32,7 @@ class Gram(NamedTuple):
         if not layout.parts:
             return np.asarray(product, dtype=np.float64)
         apart = layout.by_level(vector)
-        product = product + np.einsum("lbd,lb->d", self.across, apart)
+        product = product + self.across.reshape(-1, layout.dense).T @ apart.ravel()
         theirs = self.across @ first + np.einsum("lbc,lc->lb", self.own, apart)
         return np.concatenate([product, layout.flat(theirs)])
 

@@ -11,6 +11,7 @@ from __future__ import annotations
 from collections.abc import Sequence
 from dataclasses import dataclass
 from functools import cached_property
+from itertools import pairwise
 
 import numpy as np
 import scipy.linalg
@@ -121,7 +122,7 @@ class GroupedProblem(Quadratic):
                 np.zeros((0, 0, layout.dense)),
                 np.zeros((0, 0, 0)),
             ),
-            score=sums.score[: layout.dense] - np.einsum("lbd,lb->d", across, step),
+            score=sums.score[: layout.dense] - flat.T @ step.ravel(),
             deviance=sums.deviance
             + float(lam @ (start**2).sum(axis=0))
             - float((pull * step).sum()),
@@ -163,6 +164,13 @@ def _roots(own: FloatArray, strict: bool) -> FloatArray:
         )
 
 
+def _squared(columns: FloatArray) -> FloatArray:
+    """Σ over levels and columns of the outer squares, (D, D)."""
+    flat = columns.reshape(-1, columns.shape[2])
+    squared: FloatArray = flat.T @ flat
+    return squared
+
+
 @dataclass(frozen=True)
 class GroupedPoint(Solution):
     """The solution at one value of the smoothing parameters."""
@@ -186,7 +194,7 @@ class GroupedPoint(Solution):
         first = self.problem.dense_blocks
         kept = [part for k, part in enumerate(parts) if first + k in self.blocks]
         ends = np.cumsum([0, *kept])
-        return [slice(int(a), int(b)) for a, b in zip(ends[:-1], ends[1:], strict=True)]
+        return [slice(int(a), int(b)) for a, b in pairwise(ends)]
 
     @cached_property
     def _lam(self) -> FloatArray:
@@ -237,9 +245,7 @@ class GroupedPoint(Solution):
         lam = np.array([*self.smoothing[self.inner.blocks], *self._lam])
         p = self.problem.p
         places = [self.inner.problem.slices[j] for j in self.inner.blocks]
-        spread = [
-            np.einsum("lbd,lbe->de", self.bridge[:, s], self.bridge[:, s]) for s in self._parts
-        ]
+        spread = [_squared(self.bridge[:, s]) for s in self._parts]
         for e, s in enumerate(self._parts):
             squares = (self._crossed[:, s] ** 2).sum(axis=(0, 1))
             for j, place in enumerate(places):

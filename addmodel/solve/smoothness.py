@@ -325,14 +325,16 @@ def _close(smoothing: FloatArray, known: FloatArray) -> bool:
 
 
 def descent(gradient: FloatArray, hessian: FloatArray) -> FloatArray:
-    """Newton's step with the Hessian's eigenvalues made positive, no longer than LONGEST_STEP."""
+    """Newton's step with the Hessian's eigenvalues made positive, in no direction of them longer
+    than LONGEST_STEP.
+
+    A curvature is small only beside others where a block is all but gone, and there a step has to
+    be long.
+    """
     values, vectors = np.linalg.eigh(hessian)
-    floor = max(1e-3 * np.abs(values).max(), 1e-12)
-    step = -vectors @ ((vectors.T @ gradient) / np.maximum(np.abs(values), floor))
-    longest = np.abs(step).max()
-    if longest > LONGEST_STEP:
-        step *= LONGEST_STEP / longest
-    return np.asarray(step, dtype=np.float64)
+    floor = max(1e-9 * np.abs(values).max(), 1e-12)
+    along = (vectors.T @ gradient) / np.maximum(np.abs(values), floor)
+    return np.asarray(-vectors @ np.clip(along, -LONGEST_STEP, LONGEST_STEP), dtype=np.float64)
 
 
 def hold_at_infinity(
