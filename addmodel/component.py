@@ -171,9 +171,12 @@ class Component:
     def codes(self, block: Block, seen: Seen) -> IntArray:
         """The level of the group set apart that each row has, (n,)."""
         (view,) = (v for v in block.views if v.kind == "apart")
-        space = self.spaces[view.factor]
+        return self.group_codes(self.spaces[view.factor], seen.values)
+
+    def group_codes(self, space: Space, values: Values) -> IntArray:
+        """The level of a group of its that each row has, (n,)."""
         assert isinstance(space, Group)
-        return space.codes(space.seen(seen.values))
+        return space.codes(space.seen(values))
 
     def unknown_groups(self, block: Block, seen: Seen) -> BoolArray:
         """Rows of a group that the fit has not seen, (n,)."""

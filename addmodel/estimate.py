@@ -169,6 +169,7 @@ def _search(
     weights = table.prior
     progress("laying the components on the data")
     design = assemble(model, table)
+    _check_groups(design, table, outcome)
     scale, steps = 1.0, 0
     for _ in range(ROUNDS):
         progress(f"choosing smoothness ({sum(design.block_sizes)} functions)")
@@ -350,6 +351,22 @@ def _check_outcome(table: Table, outcome: Outcome) -> None:
         )
     if outcome.kind in ("Poisson", "NegativeBinomial", "Tweedie") and not table.outcome.any():
         raise ModelError(f"{table.outcome_name} is zero in all rows used: there are no events.")
+
+
+def _check_groups(design: Design, table: Table, outcome: Outcome) -> None:
+    """Groups of one row each cannot be told from the noise, unless its size is known."""
+    values = {key: column.values for key, column in table.columns.items()}
+    for owner, block in design.owned_blocks:
+        if not block.grouped or outcome.scale_known or len(block.views) > 1:
+            continue
+        component = design.components[owner]
+        space = component.spaces[block.views[0].factor]
+        rows = np.bincount(component.group_codes(space, values), table.counts)
+        if rows.max() <= 1:
+            raise ModelError(
+                f"The groups of {component.name} have one row each, so what is theirs cannot be "
+                "told from the noise. Leave the term out."
+            )
 
 
 def _null_deviance(table: Table, outcome: Outcome) -> float:

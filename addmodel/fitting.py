@@ -117,6 +117,11 @@ def fit(
             f"criterion='ubre' needs a known scale, and that of a {assumed.name} outcome is "
             "estimated. Write criterion='gcv' or 'reml'."
         )
+    if criterion != "reml" and assumed.dispersion_free:
+        raise ModelError(
+            "The dispersion of a negative binomial outcome is estimated by likelihood: leave "
+            f"criterion={criterion!r} out, or pass families.NegativeBinomial(alpha=...)."
+        )
     model = parse(formula)
     if criterion != "reml" and any(f.kind == "group" for t in model.terms for f in t.factors):
         raise ModelError(

@@ -11,6 +11,7 @@ from numbers import Integral, Real
 
 import numpy as np
 import pandas as pd
+import scipy.linalg
 import scipy.stats
 
 from addmodel.errors import ModelError
@@ -51,32 +52,31 @@ def corrected_df(estimate: Estimate) -> float:
     """τ + tr((V' + V'')X'WX)/φ: effective degrees of freedom for an AIC that counts the smoothing
     parameters' uncertainty (Wood, Pya & Säfken 2016, J. Am. Stat. Assoc. 111).
 
-    V' = J V_ρ J'. V'' = φ Σ_kl (V_ρ)_kl ∂L/∂ρ_k (∂L/∂ρ_l)' for the lower Cholesky factor L of A⁻¹:
-    from ∂A⁻¹/∂ρ_k = −λ_k A⁻¹E_kA⁻¹, with E_k the identity on block k, follows ∂L/∂ρ_k = LΦ(M_k),
-    M_k = −λ_k L'E_kL and Φ the lower triangle with half the diagonal; and X'WX = A − Λ. With more
-    than MOST_WRITTEN_OUT coefficients (many groups) V'' is left out.
+    V' = J V_ρ J'. V'' = φ Σ_kl (V_ρ)_kl ∂S/∂ρ_k ∂S/∂ρ_l for a root S of A⁻¹ = SS'. The paper takes
+    a Cholesky factor, whose V'' depends on the order of the terms; here it is the symmetric root,
+    A⁻¹ = S²: from ∂A⁻¹/∂ρ_k = −λ_k A⁻¹E_kA⁻¹, with E_k the identity on block k, and with
+    A⁻¹ = Q diag(s²) Q', Q'(∂S/∂ρ_k)Q has the elements −λ_k s_i² (Q'E_kQ)_ij s_j² / (s_i + s_j). And
+    X'WX = A − Λ. With more than MOST_WRITTEN_OUT coefficients (many groups) V'' is left out.
     """
     total = float(estimate.column_df.sum()) + estimate.spread_df
     if len(estimate.coefficients) > MOST_WRITTEN_OUT or not estimate.smoothing_root.size:
         return total
     covariance = estimate.posterior.whole()
     used = np.flatnonzero(np.diag(covariance) > 0)
-    inverse = covariance[np.ix_(used, used)] / estimate.scale
-    size = np.sqrt(np.diag(inverse))
-    root = size[:, None] * np.linalg.cholesky(inverse / np.outer(size, size))
+    values, q = scipy.linalg.eigh(covariance[np.ix_(used, used)] / estimate.scale)
+    s = np.sqrt(np.maximum(values, 1e-15 * values[-1]))
     ridge = np.zeros(len(covariance))
     owner = np.full(len(ridge), -1)
     for k, place in enumerate(estimate.design.block_places):
         ridge[place] = estimate.smoothing[k] if np.isfinite(estimate.smoothing[k]) else 0.0
         owner[place] = k
-    penalty = root.T @ (ridge[used, None] * root)
-    kept = np.eye(len(used)) - penalty  # L'X'WXL
-    turned = []
+    ridge, owner = ridge[used], owner[used]
+    penalty = q.T @ (ridge[:, None] * q)
     for column in estimate.smoothing_root.T:
-        push = ridge[used] * np.where(owner[used] >= 0, column[owner[used]], 0.0)
-        moved = -root.T @ (push[:, None] * root)
-        turned.append(np.tril(moved, -1) + np.diag(np.diag(moved) / 2))
-    return total + sum(float(np.sum(t * (kept @ t))) for t in turned)
+        push = ridge * np.where(owner >= 0, column[owner], 0.0)
+        moved = -(np.outer(s, s) ** 2) * (q.T @ (push[:, None] * q)) / np.add.outer(s, s)
+        total += float(((moved / s) ** 2).sum() - np.sum(moved * (moved @ penalty)))
+    return total
 
 
 def coefficients_table(estimate: Estimate, level: float = 0.95) -> pd.DataFrame:
@@ -89,7 +89,7 @@ def coefficients_table(estimate: Estimate, level: float = 0.95) -> pd.DataFrame:
     change = design.reporting()
     value = change @ estimate.coefficients[:p]
     covariance = change @ estimate.posterior.dense[:p, :p] @ change.T
-    error = np.sqrt(np.diag(covariance))
+    error = np.sqrt(np.maximum(np.diag(covariance), 0.0))
     half = quantile(estimate, level) * error
     left = max(estimate.n - float(estimate.column_df.sum()), 1.0)
     null = scipy.stats.norm() if estimate.outcome.scale_known else scipy.stats.t(left)

@@ -171,6 +171,9 @@ def with_best_dispersion(
 
 def _lowest(cost: Callable[[float], float], low: float, high: float, within: float) -> float:
     found = scipy.optimize.minimize_scalar(
-        cost, bounds=(low, high), method="bounded", options={"xatol": within}
+        lambda x: min(cost(x), 1e30),  # its parabolas cannot do with an infinite cost
+        bounds=(low, high),
+        method="bounded",
+        options={"xatol": within},
     )
     return float(found.x)

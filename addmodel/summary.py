@@ -207,7 +207,8 @@ def space_words(estimate: Estimate, space: Space) -> str:
         days = " days" if estimate.design.columns[space.key].kind == "date" else ""
         return f"a cycle of {space.key} (period {length}{days if length[0].isdigit() else ''})"
     if isinstance(space, Group):
-        return f"{space.size:,} exchangeable groups of {space.key}"
+        bare = ", ".join(key.removeprefix("C(").removesuffix(")") for key in space.keys)
+        return f"{space.size:,} exchangeable groups of {bare}"
     if isinstance(space, Globe):
         return f"a map on the globe of {space.key}"
     if isinstance(space, Place):

@@ -10,7 +10,7 @@ from addmodel.formula import parse
 from addmodel.laid import Laid
 from addmodel.outcomes import outcome_for
 from addmodel.solve.criteria import CRITERIA
-from addmodel.solve.quadratic import Problem
+from addmodel.solve.quadratic import Quadratic
 
 DATA = Path(__file__).parent / "data"
 
@@ -22,10 +22,15 @@ def gw_terms(x: np.ndarray) -> np.ndarray:
     return np.column_stack([2 * np.sin(np.pi * a), np.exp(2 * b), third])
 
 
-def problem_for(formula: str, data: object) -> Problem:
-    """The reduced penalised quadratic of a model on data, summed about its start."""
+def laid_for(formula: str, data: object, outcome: str = "gaussian") -> Laid:
+    """A model laid on data, before any smoothing parameter is chosen."""
     model = parse(formula)
-    table = read(data, model)
-    outcome = outcome_for("gaussian")
-    laid = Laid.on(assemble(model, table), table, outcome, CRITERIA["reml"], 1.0)
+    table = read(data, model, binary=outcome == "binomial")
+    design = assemble(model, table)
+    return Laid.on(design, table, outcome_for(outcome), CRITERIA["reml"], 1.0)
+
+
+def problem_for(formula: str, data: object) -> Quadratic:
+    """The reduced penalised quadratic of a Gaussian model on data, summed about its start."""
+    laid = laid_for(formula, data)
     return laid.modes.quadratic(laid.start, fisher=True)

@@ -2,6 +2,7 @@
 
 import numpy as np
 import pytest
+from scipy.linalg import sqrtm
 
 import addmodel as am
 
@@ -98,8 +99,8 @@ def test_new_counts_are_covered():
     assert 0.86 < inside < 0.99  # whole numbers cover a little more than 90 %
 
 
-def test_corrected_degrees_of_freedom_against_differences_of_cholesky_factors():
-    """τ + tr((V' + V'')X'WX)/φ with ∂β/∂ρ and ∂L/∂ρ from refits (Wood, Pya & Säfken 2016)."""
+def test_corrected_degrees_of_freedom_against_differences_of_roots():
+    """τ + tr((V' + V'')X'WX)/φ with ∂β/∂ρ and ∂S/∂ρ from refits (Wood, Pya & Säfken 2016)."""
     rng = np.random.default_rng(4)
     data = {"x": rng.uniform(size=200), "z": rng.uniform(size=200)}
     data["y"] = np.sin(6 * data["x"]) + np.cos(5 * data["z"]) + 0.4 * rng.normal(size=200)
@@ -111,7 +112,7 @@ def test_corrected_degrees_of_freedom_against_differences_of_cholesky_factors():
         near = am.fit(
             f"y ~ curve(x, detail=20, smoothing={a}) + curve(z, detail=20, smoothing={b})", data
         ).estimate
-        return np.linalg.cholesky(near.posterior.dense / near.scale), near.coefficients
+        return np.real(sqrtm(near.posterior.dense / near.scale)), near.coefficients
 
     h, roots, moves = 1e-4, [], []
     for k in range(2):
@@ -137,3 +138,9 @@ def test_corrected_degrees_of_freedom_against_differences_of_cholesky_factors():
     df = (fit.aic_corrected + 2 * fit.log_likelihood) / 2 - 1
     assert df == pytest.approx(fit.effective_df + gain, abs=1e-5)
     assert gain > 0.1
+
+
+@pytest.mark.parametrize("criterion", ["gcv", "ubre"])
+def test_a_dispersion_is_estimated_by_likelihood(criterion):
+    with pytest.raises(am.ModelError, match="estimated by likelihood"):
+        am.fit("y ~ x", {"x": X, "y": WIDE}, outcome="negative binomial", criterion=criterion)

@@ -165,12 +165,13 @@ def check(fit: am.Fit, case: Case) -> None:
         numbers += ["log_likelihood", "aic", "aic_corrected", "criterion_value"]
     for name in numbers:
         assert finite(getattr(fit, name)), name
-    rows = {name: values[:3] for name, values in case.data.items()}
+    rows = {name: values[fit.rows[:3]] for name, values in case.data.items()}
     for more in ({}, {"new_observation": True}):
         table = fit.predict(rows, interval=0.9, **more)
         assert finite(table.drop(columns="outside")), table
+    used = {name: values[fit.rows] for name, values in case.data.items()}
     np.testing.assert_allclose(
-        fit.predict(case.data)[fit.rows],
+        fit.predict(used),
         fit.fitted,
         rtol=1e-5,
         atol=1e-9 * np.abs(fit.fitted).max(),

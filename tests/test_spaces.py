@@ -4,9 +4,9 @@ import numpy as np
 import pytest
 
 from addmodel.spaces.base import Penalised, Space, support
-from addmodel.spaces.curve import Curve, bent, integrated
+from addmodel.spaces.curve import Curve
 from addmodel.spaces.cycle import Cycle, phase
-from addmodel.spaces.globe import Globe, wahba
+from addmodel.spaces.globe import Globe
 from addmodel.spaces.group import Group
 from addmodel.spaces.levels import Levels
 from addmodel.spaces.line import Line

@@ -203,9 +203,9 @@ DAMAGED = "is not a saved fit, or it is damaged"
 EDITS = {
     "another format": (json_edit(lambda b: b.update(format="x")), "is not a saved fit"),
     "no format": (json_edit(lambda b: b.pop("format")), "is not a saved fit"),
-    "version 2": (
-        json_edit(lambda b: b.update(version=2)),
-        "has format version 2; this addmodel reads version 1",
+    "version 99": (
+        json_edit(lambda b: b.update(version=99)),
+        "has format version 99; this addmodel reads version 2",
     ),
     "no version": (json_edit(lambda b: b.pop("version")), "has format version None"),
     "no estimate": (json_edit(lambda b: b.pop("estimate")), DAMAGED),

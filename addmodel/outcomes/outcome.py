@@ -130,7 +130,8 @@ class Outcome:
             left = self._left(y, mean, fisher > least)
             return Curvature(weights * left, fisher, fisher)
         v, v1, _ = variance(self.family, mean)
-        a, a1 = h1 / v, h2 / v - h1**2 * v1 / v**2
+        a, r = h1 / v, v1 / v
+        a1 = h2 / v - h1 * a * r
         fisher = np.maximum(weights * h1 * a, least)
         left = self._left(y, mean, fisher > least)
         observed = fisher - weights * left * a1
@@ -139,7 +140,7 @@ class Outcome:
     def _left(self, y: FloatArray, mean: FloatArray, undecided: BoolArray) -> FloatArray:
         """y − μ, (n,); nothing for a row that is decided, and rightly: there a mode may rest."""
         left = y - mean
-        return np.where(undecided | (np.abs(left) > 1e-9), left, 0.0)
+        return np.where(undecided | (np.abs(left) > 10 * LEAST_WEIGHT), left, 0.0)
 
     def _least(self, weights: FloatArray) -> FloatArray:
         """The smallest Fisher weight a row may have, (n,): none but for counts and yes/no."""
@@ -155,9 +156,9 @@ class Outcome:
             slope = np.where(weights * h1 > self._least(weights), weights * h2, 0.0)
             return slope, slope
         v, v1, v2 = variance(self.family, mean)
-        a = h1 / v
-        a1 = h2 / v - h1**2 * v1 / v**2
-        a2 = h3 / v - 3 * h1 * h2 * v1 / v**2 - h1**3 * (v2 / v**2 - 2 * v1**2 / v**3)
+        a, r = h1 / v, v1 / v  # by ratios: powers of a huge variance would overflow
+        a1 = h2 / v - h1 * a * r
+        a2 = h3 / v - 3 * h2 * a * r - h1**2 * a * (v2 / v - 2 * r**2)
         fisher = weights * (h2 * a + h1 * a1)
         fisher = np.where(weights * h1 * a > self._least(weights), fisher, 0.0)
         return fisher + weights * (h1 * a1 - (y - mean) * a2), fisher

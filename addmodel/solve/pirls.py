@@ -23,6 +23,7 @@ HALVINGS = 30
 LAST_STEPS = 12
 MOVED = 1e-19
 """Length of a step, δ'X'WXδ beside the deviance, that counts as none."""
+UPHILL = 1e-8
 CLOSE = 1e-13
 """Relative change of the penalised deviance at which the mode is reached."""
 
@@ -77,10 +78,14 @@ class Modes:
             beta = trial
             if before - value <= CLOSE * (abs(value) + 1e-300):
                 break
-        return self._point(beta, smoothing)
+        return self._point(beta, smoothing, ridge)
 
-    def _point(self, beta: FloatArray, smoothing: FloatArray) -> Solution:
-        """Newton's last steps, with the weights that A has; at the mode nothing moves any more."""
+    def _point(self, beta: FloatArray, smoothing: FloatArray, ridge: FloatArray) -> Solution:
+        """Newton's last steps, with the weights that A has; at the mode nothing moves any more.
+
+        A step that leads uphill is not taken: the mode is then as near as the digits allow.
+        """
+        value = self.rows.deviance(beta, self.outcome) + float(ridge @ beta**2)
         for _ in range(LAST_STEPS):
             try:
                 problem = self.quadratic(beta, fisher=self.expected, strict=True)
@@ -89,8 +94,12 @@ class Modes:
                 # Observed weights can be negative far from the mode of a link not canonical.
                 point = self.quadratic(beta, fisher=True).at(smoothing)
             sums = point.problem.sums
-            before, beta = beta, point.coefficients()
-            step = beta - before
+            trial = point.coefficients()
+            step, before = trial - beta, value
+            value = self.rows.deviance(trial, self.outcome) + float(ridge @ trial**2)
+            if not value <= before + UPHILL * abs(before):
+                break
+            beta = trial
             length = float(step @ sums.gram.times(step, sums.layout))
             if length <= MOVED * (abs(point.deviance) + 1e-300):
                 break

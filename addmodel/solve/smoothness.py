@@ -227,7 +227,8 @@ def quick_look(
         place, size = problem.slices[j], problem.sizes[j]
         d, v = diagonal[place], problem.pull[place] + diagonal[place] * problem.origin[place]
         lam = np.geomspace(20 * d.max(), half_shrunk(d, 0.7 * size), 40)
-        left = problem.base - (v**2 / (d + lam[:, None])).sum(axis=1)
+        with np.errstate(over="ignore"):  # and is then bounded below
+            left = problem.base - (v**2 / (d + lam[:, None])).sum(axis=1)
         # Functions that are correlated with each other can seem to take away more than there is.
         left = np.maximum(left, max(1e-3 * problem.base, np.finfo(float).tiny))
         cost = (problem.n - problem.p) * np.log(left) + np.log1p(d / lam[:, None]).sum(axis=1)
@@ -321,7 +322,8 @@ def _close(smoothing: FloatArray, known: FloatArray) -> bool:
     if (np.isinf(smoothing) != np.isinf(known)).any():
         return False
     finite = np.isfinite(smoothing)
-    return bool(np.abs(np.log(smoothing[finite] / known[finite])).max(initial=0.0) < 0.7)
+    apart = np.log(smoothing[finite]) - np.log(known[finite])
+    return bool(np.abs(apart).max(initial=0.0) < 0.7)
 
 
 def descent(gradient: FloatArray, hessian: FloatArray) -> FloatArray:
