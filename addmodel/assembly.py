@@ -1,4 +1,4 @@
-"""From the formula and the data to the design: every term's strands and blocks, with their detail."""
+"""From the formula and the data to the design: the terms' strands and blocks, with their detail."""
 
 from __future__ import annotations
 

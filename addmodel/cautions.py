@@ -128,13 +128,13 @@ def of_outcome(
 def _of_cycle(design: Design, space: Cycle) -> Iterator[str]:
     if space.gap[1] > GAP:
         yield (
-            f"cycle({space.key}): {100 * space.gap[1]:.0f} % of the period is without data. The curve there "
-            "is a guess; predictions there are flagged as outside."
+            f"cycle({space.key}): {100 * space.gap[1]:.0f} % of the period is without data. The "
+            "curve there is a guess; predictions there are flagged as outside."
         )
     if design.columns[space.key].kind == "date" and not isinstance(space.period, str):
         yield (
-            f"cycle({space.key}): {space.key} is a date, so its period is {space.period:g} days. For the time "
-            "of the day or year write period='day' or period='year'."
+            f"cycle({space.key}): {space.key} is a date, so its period is {space.period:g} days. "
+            "For the time of the day or year write period='day' or period='year'."
         )
 
 

@@ -60,7 +60,9 @@ class Joint:
         at = _cells(x, low, high)
         cells = np.zeros((CELLS, CELLS), dtype=bool)
         cells[at[:, 0], at[:, 1]] = True
-        return cls(keys, low, high, scipy.ndimage.binary_dilation(cells, np.ones((3, 3))))
+        return cls(
+            keys, low, high, scipy.ndimage.binary_dilation(cells, np.ones((3, 3), dtype=bool))
+        )
 
     def holds(self, values: Values) -> BoolArray:
         """Whether rows lie among the data, (n,)."""

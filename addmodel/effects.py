@@ -13,7 +13,7 @@ from addmodel import figures, joints
 from addmodel.errors import ModelError
 from addmodel.estimate import Estimate
 from addmodel.formula import find_sum
-from addmodel.grids import Axis, along, axes, near_data, product, shown, within
+from addmodel.grids import Axis, along, axes, near_data, plain_name, product, shown, within
 from addmodel.inference import quantile
 from addmodel.matrix import DesignMatrix
 from addmodel.spaces.base import Values
@@ -163,7 +163,7 @@ def _levels(
     crowded = len(labels) > MOST_NAMED
     return figures.Panel(
         kind="ranked" if crowded else "levels",
-        covariate=", ".join(key for axis in found for key in axis.keys),
+        covariate=", ".join(plain_name(key, design.columns) for a in found for key in a.keys),
         quantity=quantity(estimate),
         x=np.arange(len(labels), dtype=np.float64),
         effect=table["effect"].to_numpy()[order],
@@ -172,6 +172,7 @@ def _levels(
         level=level,
         labels=() if crowded else tuple(labels[i] for i in order),
         shares=shares[order] if len(shares) else shares,
+        alone=any(isinstance(axis.space, Group) for axis in found),
     )
 
 

@@ -305,7 +305,7 @@ def _growth(component: Component, factor: int) -> float:
 
 
 def _uncapped(component: Component, factor: int) -> bool:
-    """Whether all that the distinct points allow is all there is: no `detail=`, no lack of knots."""
+    """Whether nothing but the distinct points bounds it: no `detail=`, no lack of knots."""
     space = component.spaces[factor]
     return not isinstance(space, Penalised) or (
         space.most == space.distinct - 1 - len(space.unpenalised_names)

@@ -70,6 +70,7 @@ class Panel:
     dates: bool = False
     period: float | str | None = None
     caption: str = ""  # a sentence printed under the panel in a sheet
+    alone: bool = False  # whether it has a scale of its own in a sheet
 
     def __post_init__(self) -> None:
         shapes = {v.shape for v in (self.x, self.effect, self.lower, self.upper)}
@@ -125,7 +126,7 @@ def sheet(every: Sequence[AnyPanel], width: float = 180.0) -> Figure:
     stacks: list[list[int]] = [[] for _ in range(max(1, min(len(levels), int(width // 85.0))))]
     cells = [width / (len(stacks) if p.kind == "levels" else across) for p in panels]
     captions = [wrapped(p.caption, 0.7 * c, SMALL) for p, c in zip(panels, cells, strict=True)]
-    below = LINE * max(map(len, captions))
+    below = LINE * max(map(len, captions), default=0)
     heights = [_height(p, c) + below for p, c in zip(panels, cells, strict=True)]
     for i in levels:
         min(stacks, key=lambda stack: sum(heights[j] for j in stack)).append(i)
@@ -138,7 +139,9 @@ def sheet(every: Sequence[AnyPanel], width: float = 180.0) -> Figure:
         figure = blank(width, sum(totals) + sum(tall) + LINE * len(key) + 2.0)
         places = {}
         ratios = [*totals[: len(blocks)], *tall]
-        every_room = np.ravel(figure.subfigures(len(ratios), 1, height_ratios=ratios))
+        every_room: Any = np.ravel(
+            cast(Any, figure.subfigures(len(ratios), 1, height_ratios=ratios))
+        )
         rooms = every_room[: len(blocks)]
         for room, total, (each, wide) in zip(rooms, totals, blocks, strict=True):
             for host, stack in zip(np.ravel(room.subfigures(1, len(each))), each, strict=True):
@@ -148,7 +151,8 @@ def sheet(every: Sequence[AnyPanel], width: float = 180.0) -> Figure:
                 places.update({i: (host, grid[k // wide, k % wide]) for k, i in enumerate(stack)})
         for i, panel in enumerate(panels):
             host, place = places[i]
-            limits = _limits([p for p in panels if p.quantity == panel.quantity])
+            like = [p for p in panels if p.quantity == panel.quantity and not p.alone]
+            limits = _limits([panel] if panel.alone else like)
             _paint(panel, host.add_subplot(place), limits, cells[i], heights[i] - below)
             label: Any = ("axes fraction", figure.axes[-1].xaxis.label)
             note = ("\n".join(captions[i]), (0, 0), (0, -3), label, "offset points", None, False)
@@ -156,11 +160,11 @@ def sheet(every: Sequence[AnyPanel], width: float = 180.0) -> Figure:
         for k, i in enumerate(numbers):  # the quantity is said once in a row
             if k % across and panels[i].quantity == panels[numbers[k - 1]].quantity:
                 figure.axes[i].yaxis.label.set_visible(False)
-        for panel, note, room in zip(double, notes, every_room[len(blocks) :], strict=True):
+        for pair, lines, room in zip(double, notes, every_room[len(blocks) :], strict=True):
             left, right = room.subplots(1, 2)
-            joints.paint(panel, left, right, width)
-            if note:
-                room.supxlabel("\n".join(note), x=0.02, ha="left", **NOTE)
+            joints.paint(pair, left, right, width)
+            if lines:
+                room.supxlabel("\n".join(lines), x=0.02, ha="left", **NOTE)
         figure.supxlabel("\n".join(key), x=2 / width, ha="left", **NOTE)
     return figure
 
@@ -353,7 +357,7 @@ def _limits(panels: Sequence[Panel]) -> Limits:
 def _key(panels: Sequence[Panel], double: Sequence[joints.Picture]) -> str:
     """What the tints, strips and bars are, for the kinds of panel there are."""
     families = [p for p in double if isinstance(p, joints.Family)]
-    levels = sorted({p.level for p in [*panels, *families]})
+    levels = sorted({p.level for p in panels} | {p.level for p in families})
     level = " or ".join(f"{100 * each:g} %" for each in levels)
     pale = ", paler outside the central 98 % of the data" if any(map(_core, panels)) else ""
     parts = [

@@ -113,15 +113,21 @@ def shown(values: Values, columns: Mapping[str, Column]) -> dict[str, Any]:
     """Covariates as the caller knows them."""
     result: dict[str, Any] = {}
     for key, x in values.items():
-        column = columns[key]
+        column, name = columns[key], plain_name(key, columns)
         if column.kind == "levels":
             codes = np.asarray(x, dtype=np.int64)
-            result[key] = pd.Categorical.from_codes(codes, categories=pd.Index(column.levels))
+            result[name] = pd.Categorical.from_codes(codes, categories=pd.Index(column.levels))
         elif column.kind == "date":
-            result[key] = np.datetime64(0, "us") + (x * 86_400e6).round().astype("timedelta64[us]")
+            result[name] = np.datetime64(0, "us") + (x * 86_400e6).round().astype("timedelta64[us]")
         else:
-            result[key] = x
+            result[name] = x
     return result
+
+
+def plain_name(key: str, columns: Mapping[str, Column]) -> str:
+    """The covariate's own name: x for C(x), unless x stands in the model as a number too."""
+    own = columns[key].name
+    return key if own in columns else own
 
 
 def _at(at: object, spaces: Mapping[tuple[str, ...], Space]) -> dict[tuple[str, ...], object]:
@@ -131,7 +137,8 @@ def _at(at: object, spaces: Mapping[tuple[str, ...], Space]) -> dict[tuple[str, 
     if isinstance(at, Mapping):
         found: dict[tuple[str, ...], object] = {}
         for key, values in at.items():
-            fits = [keys for keys in spaces if key in (", ".join(keys), *keys)]
+            bare = {keys: [k.removeprefix("C(").removesuffix(")") for k in keys] for keys in spaces}
+            fits = [k for k in spaces if key in (", ".join(k), *k, ", ".join(bare[k]), *bare[k])]
             if not fits:
                 raise ModelError(f"at= names '{key}'. {nearest(str(key), known)}")
             found[fits[0]] = values

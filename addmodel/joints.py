@@ -97,14 +97,14 @@ def paint(panel: Picture, left: Axes, right: Axes, width: float) -> None:
 
 
 def _paint_surface(panel: Surface, left: Axes, right: Axes, width: float) -> None:
-    from matplotlib import colors
+    from matplotlib import colors, ticker
 
     masked = np.ma.masked_invalid(panel.effect.T)
     largest = max(float(np.abs(masked).max()) if masked.count() else 1.0, 1e-12)
-    steps = np.linspace(-largest, largest, 15)
+    steps = ticker.MaxNLocator(14, symmetric=True).tick_values(-largest, largest)
     # Two sides of zero, light in the middle: the darker, the farther from it.
     two = colors.LinearSegmentedColormap.from_list("two", ["#7A3E00", "#F7F4EE", "#0B4A50"])
-    filled = left.contourf(panel.x, panel.y, masked, steps, cmap=two, extend="both")
+    filled = left.contourf(panel.x, panel.y, masked, steps, cmap=two)
     lines = left.contour(
         panel.x, panel.y, masked, steps[::2], colors=INK, linewidths=0.35, linestyles="solid"
     )
@@ -114,7 +114,7 @@ def _paint_surface(panel: Surface, left: Axes, right: Axes, width: float) -> Non
     grey = right.contourf(panel.x, panel.y, errors, 8, cmap=one)
     for ax, drawn, title in ((left, filled, panel.quantity), (right, grey, "Its standard error")):
         bar = ax.figure.colorbar(drawn, ax=ax, shrink=0.85, aspect=18, pad=0.02)
-        bar.outline.set_visible(False)  # type: ignore[operator]
+        bar.outline.set_visible(False)
         bar.ax.tick_params(labelsize=SMALL, length=2, width=0.5, color=FAINT, labelcolor=INK)
         ax.set_title("\n".join(wrapped(title, 0.4 * width, SIZE)), loc="left", **_TITLE)
         _dress(ax, panel.across, panel.upward, width)
@@ -155,7 +155,9 @@ def _paint_family(panel: Family, left: Axes, right: Axes, width: float) -> None:
             ax.plot(panel.x, curve, color=colour, linewidth=1.4, linestyle=style, label=label)
         values = np.concatenate([curves.ravel(), *([] if many else [lower.ravel(), upper.ravel()])])
         values = values[np.isfinite(values)]
-        low, high = np.quantile(values, [0.005, 0.995]) if len(values) else (-1.0, 1.0)
+        low, high = (
+            np.quantile(values, [0, 1] if many else [0.005, 0.995]) if len(values) else (-1.0, 1.0)
+        )
         room = 0.08 * max(high - low, 1e-12)
         ax.set_ylim(min(low, 0.0) - room, max(high, 0.0) + room)
         ax.set_xlim(panel.x[0], panel.x[-1])

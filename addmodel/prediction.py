@@ -96,6 +96,7 @@ def predict(
             Caution,
             stacklevel=3,
         )
+    mean: Callable[[FloatArray], FloatArray]
     mean = estimate.outcome.mean if scale == "outcome" else _same
     if groups == "average" and scale == "outcome":
         mean = _averaged(estimate, between)

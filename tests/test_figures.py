@@ -16,8 +16,10 @@ import matplotlib.dates
 import numpy as np
 import pytest
 from matplotlib.axes import Axes
+from matplotlib.backends.backend_agg import FigureCanvasAgg
 from matplotlib.figure import Figure
 
+from addmodel import figures, joints
 from addmodel.figures import Panel, density, draw, save, sheet, single
 
 QUANTITY = "Effect on pm (difference)"
@@ -460,3 +462,57 @@ def test_wrong_lengths_are_refused() -> None:
         stations(4, labels=("a", "b"))
     with pytest.raises(ValueError, match="at least one panel"):
         sheet([])
+
+
+def surface(map_: bool = False) -> joints.Surface:
+    x, y = np.linspace(0, 12, 25), np.linspace(0, 6, 21)
+    effect = np.sin(x / 2)[:, None] * np.cos(y / 2)[None, :]
+    effect[:4, :4] = np.nan
+    scale = joints.Scale("east, km"), joints.Scale("north, km")
+    return joints.Surface(*scale, "Effect on y", x, y, effect, 0.1 + 0 * effect, map_)
+
+
+def family(curves: int) -> joints.Family:
+    x = np.linspace(0, 24, 49)
+    effect = np.array([np.sin(2 * np.pi * x / 24 + k / 3) for k in range(curves)])
+    about = effect - effect.mean(axis=0)
+    labels = tuple(f"level {k}" for k in range(curves))
+    bands = (effect - 0.2, effect + 0.2, about, about - 0.2, about + 0.2)
+    across = joints.Scale("hour", period=24.0)
+    return joints.Family(across, "Effect on y", x, labels, effect, *bands, 0.95)
+
+
+def test_a_map_has_one_scale_and_leaves_white_what_it_does_not_know():
+    figure = figures.single(surface(map_=True))
+    fields = figure.axes[:2]
+    for field in fields:
+        assert field.get_aspect() == 1.0
+        assert field.get_xlabel() == "east, km"
+        assert field.get_ylabel() == "north, km"
+    canvas = FigureCanvasAgg(figure)
+    canvas.draw()
+    corner = fields[0].transData.transform((0.5, 0.4)).astype(int)
+    image = np.asarray(canvas.buffer_rgba())
+    assert (image[-corner[1], corner[0], :3] > 250).all()
+
+
+@pytest.mark.parametrize("curves", [3, 12])
+def test_curves_by_level_and_their_deviations(curves):
+    figure = figures.single(family(curves))
+    left, right = figure.axes[:2]
+    drawn = [line for line in left.get_lines() if len(line.get_xdata()) == 49]
+    assert len(drawn) == curves
+    deviations = [line for line in right.get_lines() if len(line.get_xdata()) == 49]
+    total = sum(line.get_ydata() for line in deviations)
+    np.testing.assert_allclose(total, 0, atol=1e-12)
+    if curves <= joints.MANY:
+        texts = [text.get_text() for text in right.get_legend().get_texts()]
+        assert texts == [f"level {k}" for k in range(curves)]
+
+
+def test_a_sheet_of_all_kinds(tmp_path):
+    figure = figures.sheet([surface(), family(3), surface(map_=True)])
+    figures.save(figure, tmp_path / "all")
+    assert (tmp_path / "all.pdf").stat().st_size > 10_000
+    with pytest.raises(ValueError, match="two fields"):
+        figures.draw(family(2), figure.axes[0])

@@ -151,10 +151,10 @@ def _could_take(
     columns = [np.ones((len(x), 1)), space.null(x), space.penalised(x, size)]
     rooted = np.concatenate(columns, axis=1) * np.sqrt(weights)[:, None]
     gram = rooted.T @ rooted
-    size = np.sqrt(np.maximum(np.diag(gram), np.finfo(float).tiny))
-    right = rooted.T @ (np.sqrt(weights) * residuals) / size
-    unit = gram / np.outer(size, size)
+    lengths = np.sqrt(np.maximum(np.diag(gram), np.finfo(float).tiny))
+    right = rooted.T @ (np.sqrt(weights) * residuals) / lengths
+    unit = gram / np.outer(lengths, lengths)
     unit[np.diag_indices_from(unit)] += 1e-9  # columns may repeat each other under other weights
-    taken = scipy.linalg.solve(unit, right, assume_a="pos", check_finite=False) / size
+    taken = scipy.linalg.solve(unit, right, assume_a="pos", check_finite=False) / lengths
     projection: FloatArray = rooted @ taken / np.sqrt(weights)
     return projection

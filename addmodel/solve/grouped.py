@@ -110,7 +110,7 @@ class GroupedProblem(Quadratic):
         across = sums.gram.across[:, free]
         own = sums.gram.own[:, free][:, :, free] + np.diag(lam)
         roots = _roots(own, strict)
-        inverse = np.linalg.inv(own) if len(lam) > 1 else 1 / own
+        inverse = np.asarray(np.linalg.inv(own) if len(lam) > 1 else 1 / own, dtype=np.float64)
         bridge = inverse @ across
         step = np.einsum("lbc,lc->lb", inverse, pull)
         flat = across.reshape(-1, layout.dense)

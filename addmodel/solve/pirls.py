@@ -98,6 +98,7 @@ class Modes:
             step, before = trial - beta, value
             value = self.rows.deviance(trial, self.outcome) + float(ridge @ trial**2)
             if not value <= before + UPHILL * abs(before):
+                point = replace(point, penalised_deviance=before)  # not what it would have become
                 break
             beta = trial
             length = float(step @ sums.gram.times(step, sums.layout))

@@ -34,7 +34,9 @@ SPANNED = 1e-10
 class Mode(Protocol):
     """What the solver must know of a solution about which the weights change with the mean."""
 
-    beta: FloatArray  # (P,)
+    @property
+    def beta(self) -> FloatArray:
+        """The coefficients (P,)."""
 
     def elsewhere(self, smoothing: FloatArray) -> Solution:
         """The mode at other smoothing parameters."""

@@ -231,7 +231,9 @@ def quick_look(
             left = problem.base - (v**2 / (d + lam[:, None])).sum(axis=1)
         # Functions that are correlated with each other can seem to take away more than there is.
         left = np.maximum(left, max(1e-3 * problem.base, np.finfo(float).tiny))
-        cost = (problem.n - problem.p) * np.log(left) + np.log1p(d / lam[:, None]).sum(axis=1)
+        cost = (problem.n - problem.p) * np.log(left) + (
+            np.log(d + lam[:, None]) - np.log(lam[:, None])
+        ).sum(axis=1)
         own[j] = lam[cost.argmin()]
         if many:
             for start, lam_j in zip(common, ridges_for(problem, j, COMMON), strict=True):
@@ -384,7 +386,7 @@ def look_around(
         trials.append((wide, criterion.cost(wide.at(point.smoothing)), rough))
         for problem, before, lam in trials:
             both = np.isfinite([lam, here])
-            if lam == here or (both.all() and abs(np.log(lam / here)) < NEAR):
+            if lam == here or (both.all() and abs(np.log(lam) - np.log(here)) < NEAR):
                 continue
             trial = point.smoothing.copy()
             trial[j] = lam

@@ -78,4 +78,4 @@ class Group(Space):
 
     def penalised(self, x: npt.NDArray[Any], count: int | None = None) -> FloatArray:
         columns = self.codes(x)[:, None] == np.arange(len(self.labels))[:count]
-        return columns.astype(np.float64)
+        return np.asarray(columns, dtype=np.float64)

@@ -57,12 +57,12 @@ class Levels(Space):
     def indicators(self, x: npt.NDArray[Any]) -> FloatArray:
         """One column a level, (n, L); a row that is no level stands for an average one."""
         codes = self.codes(x)
-        columns = (codes[:, None] == np.arange(len(self.labels))).astype(np.float64)
+        columns = np.asarray(codes[:, None] == np.arange(len(self.labels)), dtype=np.float64)
         columns[codes < 0] = self.shares
         return columns
 
     def unpenalised(self, x: npt.NDArray[Any]) -> FloatArray:
-        return np.delete(self.indicators(x), self.base, axis=1)
+        return np.asarray(np.delete(self.indicators(x), self.base, axis=1), dtype=np.float64)
 
     def null(self, x: npt.NDArray[Any]) -> FloatArray:
         """Orthonormal contrasts that sum to zero over the levels: no level is special."""

@@ -89,8 +89,7 @@ class Scattered(Penalised):
                 for i in range(0, len(sites), CHUNK)
             ]
         )
-        beyond: BoolArray = nearest > self.reach
-        return beyond
+        return np.asarray(nearest > self.reach, dtype=bool)
 
 
 def distances(sites: FloatArray, others: FloatArray) -> FloatArray:
@@ -115,7 +114,7 @@ def well_spread(sites: FloatArray, count: int) -> FloatArray:
         farthest = int(nearest.argmax())
         chosen.append(farthest)
         nearest = np.minimum(nearest, distances(pool, pool[[farthest]])[:, 0])
-    return pool[np.sort(chosen)]
+    return np.asarray(pool[np.sort(chosen)], dtype=np.float64)
 
 
 def laid_parts(kind: type[Scattered], sites: FloatArray, weights: FloatArray, all_: bool) -> Parts:
