@@ -257,6 +257,6 @@ def near_data(estimate: Estimate, found: Sequence[Axis], values: Values) -> npt.
         if set(space.keys) <= set(values):
             inside &= ~space.outside(space.seen(values))
     joint = estimate.design.joints.get(tuple(sorted(running)))
-    if joint is not None:
+    if joint is not None and not any(isinstance(axis.space, Cycle) for axis in found):
         inside &= joint.holds(values)
     return inside

@@ -127,7 +127,7 @@ _TITLE: dict[str, Any] = {"fontsize": SIZE, "color": INK, "parse_math": False}
 
 
 def _number(value: float) -> str:
-    return f"{value:.2g}"
+    return f"{value:g}"
 
 
 def _paint_family(panel: Family, left: Axes, right: Axes, width: float) -> None:
@@ -196,13 +196,17 @@ def _dress(ax: Axes, across: Scale, upward: Scale | None, width: float) -> None:
 
 def ticks(axis: Any, scale: Scale, width: float) -> None:
     """Ticks by the habits of dates and periods."""
+    from matplotlib import ticker
+
     if isinstance(scale.period, str):
         places, names = CALENDAR[scale.period][0], CALENDAR[scale.period][1].split()
         step = next((s for s in (1, 2) if 7.0 * len(names) / s <= width), 3)
         axis.set_ticks(places[::step], names[::step])
     elif scale.period in STEPS:
         axis.set_ticks(np.arange(0.0, 1.001 * scale.period, STEPS[scale.period]))
-    elif scale.dates:
+    elif not scale.dates:
+        axis.set_major_locator(ticker.MaxNLocator(5, steps=[1, 2, 2.5, 5, 10]))
+    else:
         import importlib
 
         dates: Any = importlib.import_module("matplotlib.dates")  # its functions have no types
