@@ -41,7 +41,7 @@ def pieces(term: Term, terms: Sequence[Term], natures: Mapping[str, Nature]) -> 
     for size in range(len(optional) + 1):
         for chosen in itertools.combinations(optional, size):
             piece = loyal | {names[i] for i in chosen}
-            if piece and not _elsewhere(piece, loyal, term, terms, natures):
+            if piece and not _elsewhere(piece, term, terms, natures):
                 owned.append(tuple(i for i, name in enumerate(names) if name in piece))
     return _merged(owned, [natures[name] in ("levels", "two") for name in names], loyal, names)
 
@@ -63,21 +63,15 @@ def _loyal(nature: Nature, penalised: bool) -> bool:
 
 
 def _elsewhere(
-    piece: set[str],
-    loyal: set[str],
-    term: Term,
-    terms: Sequence[Term],
-    natures: Mapping[str, Nature],
+    piece: set[str], term: Term, terms: Sequence[Term], natures: Mapping[str, Nature]
 ) -> bool:
     """Whether another term brings the piece: a margin of this one, or one that comes before it."""
-    own = {f.name for f in term.factors}
     for other in terms:
         theirs = {f.name for f in other.factors}
-        if other is term or not piece <= theirs:
-            continue
-        other_loyal = {name for name in theirs if natures[name] in ("number", "group")}
-        mine = {name for name in loyal if natures[name] in ("number", "group")}
-        if other_loyal == mine and (theirs < own or _place(other) < _place(term)):
+        penalised = is_penalised(other, natures)
+        fixed = {name for name in theirs if _loyal(natures[name], penalised)}
+        # It could bring the piece; of several that could, the first in a fixed order does.
+        if other is not term and fixed <= piece <= theirs and _place(other) < _place(term):
             return True
     return False
 

@@ -351,25 +351,19 @@ def _refuse_twins(components: tuple[Component, ...], values: Values, model: Mode
 
 
 def _check_own_curves(components: tuple[Component, ...], values: Values, model: Model) -> None:
-    """A curve of its own for each level needs distinct points in every level."""
-    for j, component in enumerate(components):
-        for strand in component.strands:
-            full = [component.spaces[v.factor] for v in strand.views if v.kind == "full"]
-            for view in strand.views:
-                curve = component.spaces[view.factor]
-                if not full or not isinstance(curve, Curve):
-                    continue
-                for space in full:
-                    assert isinstance(space, Levels)
-                    codes = space.codes(space.seen(values))
-                    for code, label in enumerate(space.labels):
-                        found = len(np.unique(values[curve.key][codes == code]))
-                        if found < curve.order:
-                            raise FormulaError(
-                                f"{component.name}: the level '{label}' of {space.key} has {found} "
-                                f"distinct value of {curve.key}, and a curve of its own needs at "
-                                f"least {curve.order}. Merge levels, or write "
-                                f"{space.key}*{model.terms[j].factors[view.factor].name}.",
-                                model.text,
-                                model.terms[j].span,
-                            )
+    """A curve that differs by level needs distinct points in every level."""
+    for term, component in zip(model.terms, components, strict=True):
+        curves = [s for s in component.spaces if isinstance(s, Curve)]
+        levels = [s for s in component.spaces if isinstance(s, Levels)]
+        for curve, space in itertools.product(curves, levels):
+            codes = space.codes(space.seen(values))
+            for code, label in enumerate(space.labels):
+                found = len(np.unique(values[curve.key][codes == code]))
+                if found < curve.order:
+                    raise FormulaError(
+                        f"{component.name}: the level '{label}' of {space.key} has {found} "
+                        f"distinct value of {curve.key}, and a curve that differs by level needs "
+                        f"at least {curve.order} in each. Merge levels, or leave the product out.",
+                        model.text,
+                        term.span,
+                    )

@@ -103,6 +103,10 @@ def predict(
     scale: Annotated[Literal["outcome", "link"], typer.Option(help="Scale of the result.")] = (
         "outcome"
     ),
+    groups: Annotated[
+        Literal["own", "zero", "average"],
+        typer.Option(help="Each row's own group, the middle of the groups, or their average."),
+    ] = "own",
     unseen: Annotated[
         Literal["error", "base", "average"], typer.Option(help="What an unseen level stands for.")
     ] = "error",
@@ -126,6 +130,7 @@ def predict(
             new_observation=new_observation,
             per=per,
             unseen=unseen,
+            groups=groups,
             missing=missing,
         )
         assert isinstance(table, pd.DataFrame)
@@ -270,3 +275,7 @@ def _write_table(table: pd.DataFrame, path: Path, index: bool = True) -> None:
             table.to_csv(temporary, index=index)
         else:
             table.to_parquet(temporary, index=index)
+
+
+if __name__ == "__main__":
+    main()

@@ -84,7 +84,26 @@ def effect(estimate: Estimate, name: str, *, at: object, level: float) -> Effect
         table["outside"] = ~near_data(estimate, found, values)
     whole = known[chosen[0]] if len(chosen) == 1 else name
     picture = _picture(estimate, found, table, matrix, level, values)
+    if not isinstance(picture, figures.Panel):
+        picture = replace(picture, caption=_caption(estimate, whole, found, picture))
     return Effect(whole, table, picture)
+
+
+def _caption(
+    estimate: Estimate, name: str, found: Sequence[Axis], picture: figures.AnyPanel
+) -> str:
+    """Which component a picture shows, and at which values of what it has no direction for."""
+    columns = estimate.design.columns
+    held = []
+    for axis in found:
+        shown_once = isinstance(picture, joints.Surface) or len(axis.values) == 1
+        if axis.discrete and shown_once:
+            label, count = axis.labels(columns)[0], len(axis.values)
+            names = ", ".join(plain_name(key, columns) for key in axis.keys)
+            value = label if axis.kind == "cut" else f"{names} = {label}"
+            more = f" (the first of {count}; the table has all)" if count > 1 else ""
+            held.append(f"at {value}{more}")
+    return ", ".join([name, *held])
 
 
 def effect_to_draw(estimate: Estimate, component: int) -> Effect:
@@ -102,7 +121,8 @@ def effect_to_draw(estimate: Estimate, component: int) -> Effect:
     together = effect(estimate, " + ".join(names), at=None, level=0.95)
     if not isinstance(together.panel, joints.Family):
         return alone
-    return replace(together, component=name)
+    panel = replace(together.panel, caption=f"{name}, with its margins")
+    return replace(together, component=name, panel=panel)
 
 
 def _picture(

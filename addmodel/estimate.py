@@ -7,6 +7,7 @@ parameters, ask whether the detail was enough, and go again with more where it w
 from __future__ import annotations
 
 from collections.abc import Callable, Mapping
+from contextlib import AbstractContextManager
 from dataclasses import dataclass, replace
 from functools import cache
 from typing import Any
@@ -138,8 +139,7 @@ def estimate(
     """
     _check_outcome(table, outcome)
     outcome.check(table)
-    # At a few hundred columns two BLAS threads are slower than one, most of all on a busy machine.
-    with _threads().limit(limits=1, user_api="blas"):
+    with one_thread():
         found = _search(model, table, outcome, criterion, progress)
         return _estimate(model, table, criterion, arguments, found)
 
@@ -147,6 +147,11 @@ def estimate(
 @cache
 def _threads() -> ThreadpoolController:
     return ThreadpoolController()
+
+
+def one_thread() -> AbstractContextManager[object]:
+    """BLAS on one thread: at a few hundred columns two are slower, most of all when busy."""
+    return _threads().limit(limits=1, user_api="blas")  # type: ignore[no-any-return]
 
 
 @dataclass(frozen=True)

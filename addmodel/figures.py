@@ -102,9 +102,10 @@ def draw(panel: AnyPanel, ax: Axes | None = None, ylim: Limits | None = None) ->
 
 
 def single(panel: AnyPanel, width: float | None = None) -> Figure:
-    """One panel without its caption; 90 mm wide, with two covariates 180 mm, unless told."""
-    usual = 90.0 if isinstance(panel, Panel) else 180.0
-    return sheet([replace(panel, caption="")], width or usual)
+    """One panel; 90 mm wide and without its caption, with two covariates 180 mm, unless told."""
+    if isinstance(panel, Panel):
+        return sheet([replace(panel, caption="")], width or 90.0)
+    return sheet([panel], width or 180.0)
 
 
 def sheet(every: Sequence[AnyPanel], width: float = 180.0) -> Figure:

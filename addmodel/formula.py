@@ -433,6 +433,8 @@ def _factor(source: SourceText, piece: _Piece, strict: bool) -> Factor:
         raise source.error(f"{call}() takes {taken}, then options by name: {known}.", span)
     arguments = tuple(source.expression(argument) for argument in node.args)
     written = ", ".join(ast.unparse(argument) for argument in node.args)
+    if len(set(arguments)) < len(arguments):
+        raise source.error(f"{call}() names one column twice.", span)
     options: dict[str, Option] = {}
     for item in node.keywords:
         key, value = _option(source, call, item)

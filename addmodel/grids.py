@@ -11,7 +11,7 @@ import numpy as np
 import numpy.typing as npt
 import pandas as pd
 
-from addmodel.columns import Column
+from addmodel.columns import Column, level_label
 from addmodel.errors import ModelError, nearest
 from addmodel.estimate import Estimate
 from addmodel.spaces.base import FloatArray, Space, Values
@@ -93,6 +93,8 @@ def axes(estimate: Estimate, chosen: Sequence[int], at: object) -> tuple[Axis, .
         else:
             held = len(bending) > 2 or bool(len(bending) == 2 and len(numbers) > 2)
             values = _default(estimate, keys, space, kind, len(running) > 1, held)
+        if kind == "number" and len(values) == 1 and len(spaces) > 1:
+            kind = "cut"  # held at one value, it is no direction of a picture
         found.append(Axis(keys, space, kind, values))
     return tuple(sorted(found, key=lambda axis: (not axis.discrete, axis.kind != "levels")))
 
@@ -133,7 +135,7 @@ def plain_name(key: str, columns: Mapping[str, Column]) -> str:
 def _at(at: object, spaces: Mapping[tuple[str, ...], Space]) -> dict[tuple[str, ...], object]:
     if at is None:
         return {}
-    known = [key for keys in spaces for key in keys]
+    known = [key.removeprefix("C(").removesuffix(")") for keys in spaces for key in keys]
     if isinstance(at, Mapping):
         found: dict[tuple[str, ...], object] = {}
         for key, values in at.items():
@@ -195,15 +197,24 @@ def _calendar(first: float, period: str, count: int) -> FloatArray:
 def _given(estimate: Estimate, keys: tuple[str, ...], space: Space, at: object) -> npt.NDArray[Any]:
     """Values that the caller asks for, as the space takes them."""
     if isinstance(space, Group):
-        name = ", ".join(keys)
+        name = ", ".join(key.removeprefix("C(").removesuffix(")") for key in keys)
         wanted = [at] if isinstance(at, str) or not isinstance(at, Iterable) else list(at)
-        labels = [", ".join(w) if isinstance(w, tuple) else str(w) for w in wanted]
+        labels = [
+            ", ".join(map(level_label, w)) if isinstance(w, tuple) else level_label(w)
+            for w in wanted
+        ]
+        pairs = " Name each as a tuple in a list." if len(keys) > 1 else ""
         for label in labels:
             if label not in space.labels:
-                raise ModelError(f"at= names no group of {name}. {nearest(label, space.labels)}")
+                near = nearest(label, space.labels)
+                raise ModelError(f"at={label!r} is no group of {name}. {near}{pairs}")
         rows = space.combinations[[space.labels.index(label) for label in labels]]
         return rows if len(keys) > 1 else rows[:, 0]
-    return values_given(estimate.design.columns[keys[0]], at)
+    values = values_given(estimate.design.columns[keys[0]], at)
+    if isinstance(space, Levels) and (space.codes(values) < 0).any():
+        listed = " and ".join(space.labels)
+        raise ModelError(f"at= of {keys[0]}: it has the values {listed} alone; got {at!r}.")
+    return values
 
 
 def values_given(column: Column, at: object) -> FloatArray:
@@ -213,12 +224,13 @@ def values_given(column: Column, at: object) -> FloatArray:
         raise ModelError(f"at= needs at least one value of {column.name}.")
     if column.kind == "levels":
         for label in listed:
-            if str(label) not in column.levels:
+            if level_label(label) not in column.levels:
                 raise ModelError(
                     f"at={label!r} is not a level of {column.name}. "
-                    f"{nearest(str(label), column.levels)}"
+                    f"{nearest(level_label(label), column.levels)}"
                 )
-        return np.array([column.levels.index(str(label)) for label in listed], dtype=np.float64)
+        codes = [column.levels.index(level_label(label)) for label in listed]
+        return np.array(codes, dtype=np.float64)
     try:
         if column.kind == "date":
             times = np.asarray(pd.to_datetime(listed), dtype="datetime64[us]")

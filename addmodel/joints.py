@@ -100,7 +100,7 @@ def _paint_surface(panel: Surface, left: Axes, right: Axes, width: float) -> Non
     from matplotlib import colors, ticker
 
     masked = np.ma.masked_invalid(panel.effect.T)
-    largest = max(float(np.abs(masked).max()) if masked.count() else 1.0, 1e-12)
+    largest = (float(np.abs(masked).max()) if masked.count() else 0.0) or 1.0
     steps = ticker.MaxNLocator(14, symmetric=True).tick_values(-largest, largest)
     # Two sides of zero, light in the middle: the darker, the farther from it.
     two = colors.LinearSegmentedColormap.from_list("two", ["#7A3E00", "#F7F4EE", "#0B4A50"])
@@ -111,7 +111,9 @@ def _paint_surface(panel: Surface, left: Axes, right: Axes, width: float) -> Non
     left.clabel(lines, fontsize=SMALL - 1, fmt=_number)
     one = colors.LinearSegmentedColormap.from_list("one", ["#FBFAF7", "#5A5A5A"])
     errors = np.ma.masked_invalid(np.where(np.isnan(panel.effect), np.nan, panel.std_error).T)
-    grey = right.contourf(panel.x, panel.y, errors, 8, cmap=one)
+    top = (float(errors.max()) if errors.count() else 0.0) or 1.0
+    shades = ticker.MaxNLocator(8).tick_values(0.0, top)
+    grey = right.contourf(panel.x, panel.y, errors, shades, cmap=one)
     for ax, drawn, title in ((left, filled, panel.quantity), (right, grey, "Its standard error")):
         bar = ax.figure.colorbar(drawn, ax=ax, shrink=0.85, aspect=18, pad=0.02)
         bar.outline.set_visible(False)

@@ -43,16 +43,15 @@ class Laid:
         weights = table.prior
         values = {key: column.values for key, column in table.columns.items()}
         matrix = design.matrix(values, len(weights))
-        plain = matrix.dense[:, : design.p] * np.sqrt(table.counts)[:, None]
-        diagonal = np.diag(np.linalg.qr(plain)[1])
+        rows = DenseRows(matrix, table.outcome, weights, table.offset)
         start = np.zeros(matrix.layout.total)
         start[0] = null_predictor(table, outcome)
         modes = Modes(
-            rows=DenseRows(matrix, table.outcome, weights, table.offset),
+            rows=rows,
             outcome=outcome,
             p=design.p,
             sizes=design.block_sizes,
-            log_det_design=2 * float(np.log(np.abs(diagonal)).sum()),
+            log_det_design=rows.log_det_design(design.p, table.counts),
             likelihood=likelihood_of(table, outcome, scale),
             expected=criterion.name != "reml",
             null=start,

@@ -3,7 +3,7 @@
 from __future__ import annotations
 
 import warnings
-from collections.abc import Callable, Iterable, Mapping, Sequence
+from collections.abc import Callable, Collection, Iterable, Mapping, Sequence
 from dataclasses import replace
 from types import MappingProxyType
 from typing import Literal
@@ -23,6 +23,7 @@ from addmodel.spaces.base import FloatArray
 from addmodel.spaces.levels import Levels
 
 DRAWS = 4000
+STEP = 1e-5
 
 
 def predict(
@@ -51,11 +52,12 @@ def predict(
             "An interval for a new observation needs the whole model: no only=/without=."
         )
     roles, known = _offsets(estimate, per) if only is None else ({}, 0.0)
-    rows = new_rows(estimate, new, unseen=unseen, missing=missing, roles=roles)
     design = estimate.design
+    keys = {key for j in chosen for key in design.components[j].keys}
+    rows = new_rows(estimate, new, unseen=unseen, missing=missing, roles=roles, keys=keys)
     values = {key: column.values for key, column in rows.columns.items()}
     seen = Seen(_filled(values), rows.n)
-    matrix = design.matrix(seen.values, rows.n)
+    matrix = design.matrix(seen.values, rows.n, chosen)
     dense, wide = design.masks(chosen, intercept=only is None)
     between = np.zeros(rows.n)
     for k, (owner, block) in enumerate(design.owned_blocks):
@@ -75,8 +77,9 @@ def predict(
         + (0.0 if groups != "own" else between)
         + _between_levels(estimate, chosen, rows, seen)
     )
-    if groups == "own" and between.any():
-        _say_unknown(int((between > 0).sum()))
+    strangers = int(((between > 0) & ~rows.missing).sum())
+    if groups == "own" and strangers:
+        _say_unknown(strangers)
     result += rows.offset + known
     absent = rows.missing
     result[absent] = np.nan
@@ -102,6 +105,8 @@ def predict(
         mean = _averaged(estimate, between)
     if interval is None:
         return mean(result)
+    if new_observation and groups == "average":
+        error = np.sqrt(error**2 + between)
     if new_observation and not estimate.outcome.plain:
         spread, lower, upper = observation_interval(estimate, result, error, interval)
     else:
@@ -110,7 +115,7 @@ def predict(
         lower, upper = mean(result - half), mean(result + half)
         if scale == "outcome" and not estimate.outcome.plain:
             # The delta method; the interval itself is the linear predictor's, taken through.
-            spread = error * np.abs(estimate.outcome.mean_slope(result))
+            spread = error * np.abs(mean(result + STEP) - mean(result - STEP)) / (2 * STEP)
     return pd.DataFrame(
         {
             "prediction": mean(result),
@@ -192,8 +197,8 @@ def _averaged(estimate: Estimate, variance: FloatArray) -> Callable[[FloatArray]
 
 def _say_unknown(rows: int) -> None:
     warnings.warn(
-        f"{rows} rows are of groups that the fit has not seen: they stand at the middle of the "
-        "groups, with intervals as wide as groups differ.",
+        f"{rows} {'row is of a group' if rows == 1 else 'rows are of groups'} that the fit has not "
+        "seen: the middle of the groups stands in, with intervals as wide as groups differ.",
         Caution,
         stacklevel=4,
     )
@@ -237,7 +242,13 @@ def model_columns(estimate: Estimate, new: object) -> pd.DataFrame:
     rows = new_rows(estimate, new, unseen="error", missing="error")
     design = estimate.design
     values = {key: column.values for key, column in rows.columns.items()}
-    raw = design.matrix(values, rows.n).whole()
+    matrix = design.matrix(values, rows.n)
+    if design.levels_apart and (matrix.codes < 0).any():
+        raise DataError(
+            f"{int((matrix.codes < 0).sum())} rows are of groups that the fit has not seen, so "
+            "they have no columns. Leave them out, or use predict()."
+        )
+    raw = matrix.whole()
     p = design.p
     raw[:, :p] = np.linalg.solve(design.reporting().T, raw[:, :p].T).T
     return pd.DataFrame(raw, index=rows.index, columns=list(design.names))
@@ -250,8 +261,9 @@ def new_rows(
     unseen: str,
     missing: str,
     roles: Mapping[str, str] = MappingProxyType({}),
+    keys: Collection[str] | None = None,
 ) -> NewRows:
-    """Read new rows against the fitted columns; unseen levels as asked for."""
+    """Read new rows against the fitted columns (those of `keys`); unseen levels as asked for."""
     if new is None:
         raise DataError("Give the new rows to predict: a table, a mapping or a file.")
     expressions: dict[str, Expression] = {}
@@ -259,7 +271,8 @@ def new_rows(
         for factor in term.factors:
             for expression in factor.arguments:
                 expressions[column_key(factor, expression)] = expression
-    rows = read_new(new, estimate.design.columns, expressions, roles=roles, missing=missing)
+    columns = {k: c for k, c in estimate.design.columns.items() if keys is None or k in keys}
+    rows = read_new(new, columns, expressions, roles=roles, missing=missing)
     levelled = {
         key
         for component in estimate.design.components

@@ -134,7 +134,7 @@ def test_all_that_the_criterion_is_made_of(monkeypatch):
 def test_a_group_not_seen_stands_in_the_middle_with_a_wider_interval():
     fit = am.fit("y ~ x + group(g)", FRAME)
     new = FRAME.iloc[[0, 1]].assign(g=[FRAME.g[0], 999])
-    with pytest.warns(Caution, match="1 rows are of groups that the fit has not seen"):
+    with pytest.warns(Caution, match="1 row is of a group that the fit has not seen"):
         table = fit.predict(new, interval=0.95)
     middle = fit.predict(new, groups="zero")
     assert table["prediction"].iloc[1] == middle[1]

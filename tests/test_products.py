@@ -1,5 +1,7 @@
 """Products of terms: the smoothing-spline ANOVA, margins, orders, against dense solutions."""
 
+import itertools
+
 import numpy as np
 import pandas as pd
 import pytest
@@ -67,6 +69,7 @@ KINDS = {
         ("x:sex", "x:sex", ["x.sex"]),
         ("x:site", "x:site", ["x.SITE"]),
         ("site:b", "site:b", ["site", "SITE.b"]),
+        ("sex:site + site:curve(x)", "site:curve(x)", ["site", "SITE.curve(x)"]),
     ],
 )
 def test_what_a_term_brings_once_its_margins_have_theirs(formula, last, brought):
@@ -81,6 +84,38 @@ def test_what_a_term_brings_once_its_margins_have_theirs(formula, last, brought)
         ]
         found.append(".".join(names))
     assert sorted(found) == sorted(brought)
+
+
+def test_every_piece_is_brought_once_and_none_is_lost():
+    """All formulas of up to three terms over three factors: what any term could bring is there."""
+    factors = ["x", "sex", "site", "curve(z)", "group(g)"]
+    for three in itertools.combinations(factors, 3):
+        terms = [":".join(t) for k in (1, 2, 3) for t in itertools.combinations(three, k)]
+        for chosen in itertools.chain.from_iterable(
+            itertools.combinations(terms, k) for k in (1, 2, 3)
+        ):
+            model = parse("y ~ " + " + ".join(chosen))
+            brought, possible = [], set()
+            for term in model.terms:
+                names = [f.name for f in term.factors]
+                bends = any(KINDS[n] in ("smooth", "group") for n in names)
+                loyal = {
+                    n
+                    for n in names
+                    if KINDS[n] in ("number", "group") or (KINDS[n] == "two" and not bends)
+                }
+                free = [n for n in names if n not in loyal]
+                for k in range(len(free) + 1):
+                    possible |= {frozenset(loyal | set(s)) for s in itertools.combinations(free, k)}
+                for piece in pieces(term, model.terms, KINDS):
+                    full = {names[i] for i in piece.full}
+                    whole = {names[i] for i in piece.factors}
+                    for k in range(len(full) + 1):
+                        for left in itertools.combinations(sorted(full), k):
+                            brought.append(frozenset(whole - set(left)))
+            assert sorted(map(sorted, brought)) == sorted(map(sorted, possible - {frozenset()})), (
+                model.text
+            )
 
 
 def test_cross_takes_the_smallest_products_and_keeps_pairs_together():
@@ -369,7 +404,7 @@ def test_x_beside_a_broken_line_is_kept():
     [
         ("site + site:curve(x)", {"x": lambda d: d.x.where(d.site != "b", 3.0)}, am.FormulaError,
          "the level 'b' of site has 1 distinct value of x"),
-        ("place(x, x)", {}, am.FormulaError, "lie on one line"),
+        ("place(x, v)", {"v": lambda d: 2 * d.x}, am.FormulaError, "lie on one line"),
         ("globe(x, h)", {"x": lambda d: 100 * d.x}, am.FormulaError, "latitude, then longitude"),
     ],
 )  # fmt: skip

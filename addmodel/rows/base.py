@@ -12,7 +12,7 @@ from typing import NamedTuple
 
 import numpy as np
 
-from addmodel.matrix import Layout
+from addmodel.matrix import IntArray, Layout
 from addmodel.outcomes import Outcome
 from addmodel.posterior import Posterior
 from addmodel.spaces.base import FloatArray
@@ -96,6 +96,14 @@ class Rows(ABC):
         self, coefficients: FloatArray, outcome: Outcome, inner: Posterior, *, fisher: bool = False
     ) -> FloatArray:
         """Σ_i (x_i' M x_i) w_i′ x_i (P,), M = `inner`, w′ the derivative of the weight in η."""
+
+    @abstractmethod
+    def without(self, columns: IntArray) -> Rows:
+        """The same rows without some of the dense columns."""
+
+    @abstractmethod
+    def log_det_design(self, p: int, counts: FloatArray) -> float:
+        """log|T'T| of the first p columns T, each row counted `counts` (n,) times."""
 
     @abstractmethod
     def linear_predictor(self, coefficients: FloatArray) -> FloatArray:

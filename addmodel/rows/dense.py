@@ -5,7 +5,7 @@ The columns of the group set apart are kept as each row sees them, so that many 
 
 from __future__ import annotations
 
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 from functools import cached_property
 
 import numpy as np
@@ -106,6 +106,16 @@ class DenseRows(Rows):
         observed, expected = outcome.weight_slopes(self.y, eta, self.weights)
         leverage = inner.variance(self.matrix)
         return self._summed(leverage * (expected if fisher else observed))
+
+    def without(self, columns: IntArray) -> DenseRows:
+        matrix = self.matrix
+        kept = np.delete(matrix.dense, columns, axis=1)
+        layout = replace(matrix.layout, dense=kept.shape[1])
+        return replace(self, matrix=replace(matrix, dense=kept, layout=layout))
+
+    def log_det_design(self, p: int, counts: FloatArray) -> float:
+        plain = self.matrix.dense[:, :p] * np.sqrt(counts)[:, None]
+        return 2 * float(np.log(np.abs(np.diag(np.linalg.qr(plain)[1]))).sum())
 
     def linear_predictor(self, coefficients: FloatArray) -> FloatArray:
         return self.offset + self.matrix.times(coefficients)

@@ -10,6 +10,7 @@ from dataclasses import dataclass, replace
 
 import numpy as np
 
+from addmodel.matrix import IntArray as IndexArray
 from addmodel.outcomes import Outcome
 from addmodel.outcomes.likelihood import Likelihood
 from addmodel.posterior import Posterior
@@ -52,6 +53,25 @@ class Modes:
         return kind.of(
             sums, self.p, self.sizes, self.log_det_design, self.likelihood, strict=strict
         )
+
+    def without(self, columns: IndexArray) -> Modes:
+        """The same rows without some of the unpenalised columns."""
+        if not len(columns):
+            return self
+        rows = self.rows.without(columns)
+        return replace(
+            self,
+            rows=rows,
+            p=self.p - len(columns),
+            log_det_design=rows.log_det_design(self.p - len(columns), self.likelihood.counts),
+            null=np.delete(self.null, columns),
+        )
+
+    def solution(self, smoothing: FloatArray, start: FloatArray) -> Solution:
+        """The mode at smoothing parameters λ; where the weights do not change, one solve."""
+        if self.outcome.plain:
+            return self.quadratic(start, fisher=True).at(smoothing)
+        return self.at(smoothing, start)
 
     def at(self, smoothing: FloatArray, start: FloatArray) -> Solution:
         """The mode at smoothing parameters λ, from a start (P,)."""

@@ -154,14 +154,22 @@ def choose_mode(
             break
         smoothing = point.smoothing
     free = np.flatnonzero([f is None and d is None for f, d in zip(fixed, degrees, strict=True)])
-    best = newton(point, criterion, free, MODALLY)
-    steps += best.steps
+    best = settled_from(point, criterion, free, MODALLY)
+    return replace(best, steps=steps + best.steps)
+
+
+def settled_from(
+    point: Solution, criterion: Criterion, free: IndexArray, tolerance: float
+) -> Smoothness:
+    """Newton from `point`, then each smoothing parameter looked at over its whole range."""
+    best = newton(point, criterion, free, tolerance)
+    steps = best.steps
     for _ in range(len(free) + 1):
         problem = best.point.problem
         better = look_around(problem.at(best.point.smoothing), problem, criterion, free)
         if better is None:
             break
-        found = newton(best.point.elsewhere(better), criterion, free, MODALLY)
+        found = newton(best.point.elsewhere(better), criterion, free, tolerance)
         steps += found.steps
         if not criterion.cost(found.point) < criterion.cost(best.point) - 1e-9:
             break

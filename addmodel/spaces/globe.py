@@ -16,7 +16,7 @@ from typing import Any
 import numpy as np
 import numpy.typing as npt
 
-from addmodel.spaces.base import FloatArray
+from addmodel.spaces.base import BoolArray, FloatArray
 from addmodel.spaces.scattered import Scattered, laid_parts
 
 
@@ -56,6 +56,10 @@ class Globe(Scattered):
 
     def scaled(self, x: npt.NDArray[Any]) -> FloatArray:
         return unit_vectors(np.asarray(x, dtype=np.float64))
+
+    def outside(self, x: npt.NDArray[Any]) -> BoolArray:
+        beyond: BoolArray = super().outside(x) | (np.abs(x) > [90.0, 360.0]).any(axis=1)
+        return beyond
 
     @property
     def unpenalised_names(self) -> tuple[str, ...]:
