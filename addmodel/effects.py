@@ -10,13 +10,14 @@ import numpy as np
 import pandas as pd
 
 from addmodel import figures, joints
+from addmodel.bands import Band, band
 from addmodel.errors import ModelError
 from addmodel.estimate import Estimate
 from addmodel.formula import find_sum
 from addmodel.grids import Axis, along, axes, near_data, plain_name, product, shown, within
-from addmodel.inference import quantile
+from addmodel.inference import linear, quantile
 from addmodel.matrix import DesignMatrix
-from addmodel.spaces.base import Values
+from addmodel.spaces.base import FloatArray, Values
 from addmodel.spaces.cycle import Cycle
 from addmodel.spaces.group import Group
 from addmodel.spaces.levels import Levels
@@ -39,8 +40,9 @@ class Effect:
     component : str
         Its name.
     table : pandas.DataFrame
-        The covariates under their own names, then effect, std_error, lower, upper: the difference
-        from the average over the data, on the scale of the linear predictor, with a pointwise band.
+        The covariates under their own names, then effect, std_error, lower, upper (pointwise),
+        lower_whole, upper_whole (simultaneous): the difference from the average over the data, on
+        the scale of the linear predictor.
         Over two numbers also `outside`: no data are near.
     panel : figures.Panel, joints.Surface or joints.Family
         The same as a picture.
@@ -67,18 +69,8 @@ def effect(estimate: Estimate, name: str, *, at: object, level: float) -> Effect
     found = axes(estimate, chosen, at)
     values, n = product(found)
     matrix = estimate.design.of_components(values, n, chosen)
-    value = matrix.times(estimate.coefficients)
-    error = np.sqrt(np.maximum(estimate.posterior.variance(matrix), 0.0))
-    half = quantile(estimate, level) * error
-    table = pd.DataFrame(
-        {
-            **shown(values, estimate.design.columns),
-            "effect": value,
-            "std_error": error,
-            "lower": value - half,
-            "upper": value + half,
-        }
-    )
+    both = band(estimate, matrix, level)
+    table = pd.DataFrame({**shown(values, estimate.design.columns), **banded("effect", both)})
     running = [axis for axis in found if not axis.discrete]
     if len(running) > 1:
         table["outside"] = ~near_data(estimate, found, values)
@@ -87,6 +79,18 @@ def effect(estimate: Estimate, name: str, *, at: object, level: float) -> Effect
     if not isinstance(picture, figures.Panel):
         picture = replace(picture, caption=_caption(estimate, whole, found, picture))
     return Effect(whole, table, picture)
+
+
+def banded(name: str, both: Band) -> dict[str, FloatArray]:
+    """Columns of a table of effects."""
+    return {
+        name: both.value,
+        "std_error": both.error,
+        "lower": both.value - both.half,
+        "upper": both.value + both.half,
+        "lower_whole": both.value - both.half_whole,
+        "upper_whole": both.value + both.half_whole,
+    }
 
 
 def _caption(
@@ -159,6 +163,8 @@ def _curve(estimate: Estimate, axis: Axis, table: pd.DataFrame, level: float) ->
         effect=table["effect"].to_numpy()[order],
         lower=table["lower"].to_numpy()[order],
         upper=table["upper"].to_numpy()[order],
+        lower_whole=table["lower_whole"].to_numpy()[order],
+        upper_whole=table["upper_whole"].to_numpy()[order],
         level=level,
         quantiles=np.sort(within(space, quantiles)) if isinstance(space, Cycle) else quantiles,
         dates=estimate.design.columns[axis.keys[0]].kind == "date" and not cyclic,
@@ -228,7 +234,7 @@ def _family(
         dense = matrix.dense.reshape(*shape, -1)
         about = (dense - np.einsum("c,cgd->gd", weights, dense)).reshape(shape[0] * shape[1], -1)
         apart_too = replace(matrix, dense=about)
-        error = np.sqrt(np.maximum(estimate.posterior.variance(apart_too), 0.0)).reshape(shape)
+        error = linear(estimate, apart_too)[1].reshape(shape)
     half = quantile(estimate, level) * error
     return joints.Family(
         across=_scale(estimate, axis),

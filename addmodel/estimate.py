@@ -73,6 +73,9 @@ class Estimate:
     smoothing_spread: FloatArray  # (P, k) times its transpose: what uncertain smoothing adds to it
     spread_df: float
     """What that adds to the effective degrees of freedom."""
+    beyond: FloatArray | None  # (P, r) the same for blocks at infinity; None: not worked out yet
+    answers: tuple[tuple[float, float, float], ...] | None
+    """For each component p_none, p_straight and overlap; None: not asked yet."""
     smoothing_root: FloatArray  # (blocks, k) times its transpose: the covariance of log λ
     shares: FloatArray  # (components,) cov(f_j, η)/var(η) in the prior weights
     smoothing: FloatArray  # (blocks,) λ, may be infinite
@@ -233,6 +236,8 @@ def _estimate(
         ),
         smoothing_spread=spread,
         spread_df=_spread_df(fisher, spread, scale),
+        beyond=None,
+        answers=None,
         smoothing_root=root,
         shares=_shares(laid, beta, weights),
         smoothing=point.smoothing,

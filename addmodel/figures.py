@@ -70,6 +70,9 @@ class Panel:
     dates: bool = False
     period: float | str | None = None
     caption: str = ""  # a sentence printed under the panel in a sheet
+    lower_whole: FloatArray = field(default_factory=lambda: np.empty(0))  # (g,) simultaneous
+    upper_whole: FloatArray = field(default_factory=lambda: np.empty(0))
+    points: FloatArray = field(default_factory=lambda: np.empty((0, 2)))  # partial residuals
     alone: bool = False  # whether it has a scale of its own in a sheet
 
     def __post_init__(self) -> None:

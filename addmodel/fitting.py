@@ -4,7 +4,8 @@ from __future__ import annotations
 
 import warnings
 from collections.abc import Sequence
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
+from functools import cached_property
 from pathlib import Path
 from typing import TYPE_CHECKING, Any, Literal
 
@@ -26,6 +27,7 @@ from addmodel.inference import (
 )
 from addmodel.outcomes import outcome_for
 from addmodel.prediction import model_columns, predict
+from addmodel.significance import Questions
 from addmodel.solve.criteria import CRITERIA
 from addmodel.spaces.base import FloatArray
 from addmodel.summary import Summary, deviance_reduction, summarise
@@ -162,9 +164,21 @@ class Fit:
     def __repr__(self) -> str:
         return str(self.summary())
 
+    @cached_property
+    def _sure(self) -> Estimate:
+        """The estimate with the uncertainty of smoothing parameters at infinity, once asked for."""
+        if self.estimate.beyond is not None:
+            return self.estimate
+        return replace(self.estimate, beyond=Questions(self.estimate).beyond())
+
+    @cached_property
+    def _answered(self) -> Estimate:
+        """The estimate with every component's tests and overlap, once asked for."""
+        return self._sure if self._sure.answers is not None else Questions(self._sure).answered()
+
     def summary(self) -> Summary:
         """How the fit went, the model in words, components, coefficients, cautions, the recipe."""
-        return summarise(self.estimate)
+        return summarise(self._answered)
 
     @property
     def formula(self) -> str:
@@ -173,8 +187,14 @@ class Fit:
 
     @property
     def components(self) -> pd.DataFrame:
-        """One row a component: effective_df, share, smoothing (λ with x scaled to [0, 1])."""
-        return components_table(self.estimate)
+        """One row a component: effective_df, p_none, p_straight, share, overlap, smoothing.
+
+        ``p_none`` asks whether the component is nothing at all, ``p_straight`` whether it is no
+        more than its unpenalised part (a straight line, a tilted plane); blank where there is no
+        such part. ``share`` is its part of the fitted values' variation, ``overlap`` how much of it
+        the other components could do (0 to 1), ``smoothing`` λ with x scaled to [0, 1].
+        """
+        return components_table(self._answered)
 
     @property
     def coefficients(self) -> pd.DataFrame:
@@ -182,7 +202,7 @@ class Fit:
 
         The intercept is the mean at numbers 0, first levels and curves at their average.
         """
-        return coefficients_table(self.estimate)
+        return coefficients_table(self._sure)
 
     @property
     def cautions(self) -> tuple[str, ...]:
@@ -344,7 +364,7 @@ class Fit:
             a probability.
         """
         return predict(
-            self.estimate,
+            self.estimate if interval is None else self._sure,
             new,
             scale=scale,
             interval=interval,
@@ -372,14 +392,14 @@ class Fit:
         level : float
             Level of the band.
         """
-        return effect(self.estimate, component, at=at, level=level)
+        return effect(self._sure, component, at=at, level=level)
 
     def plot(self) -> Figure:
         """A sheet of all components' effects, on one scale."""
         design = self.estimate.design
         if not design.count:
             raise ModelError("The model has no components to draw.")
-        return figures.sheet([effect_to_draw(self.estimate, j).panel for j in range(design.count)])
+        return figures.sheet([effect_to_draw(self._sure, j).panel for j in range(design.count)])
 
     def columns(self, new: object) -> pd.DataFrame:
         """The model's columns at new rows, (n, P); columns @ coefficients = linear predictor.
@@ -391,14 +411,14 @@ class Fit:
 
     def draws(self, count: int = 1000, seed: int = DEFAULT_SEED) -> FloatArray:
         """Posterior draws of all coefficients, shape (count, P), in the order of `columns`."""
-        return posterior_draws(self.estimate, count, seed)
+        return posterior_draws(self._sure, count, seed)
 
     def save(self, path: str | Path) -> None:
         """Write the fit, without its rows, to a file; its name ends in .addmodel."""
         target = Path(path)
         if target.suffix != ".addmodel":
             raise ModelError(f"A saved fit ends in .addmodel; got '{target.name}'.")
-        store.save(self.estimate, target)
+        store.save(self._answered, target)
 
 
 def load(path: str | Path) -> Fit:

@@ -1,8 +1,8 @@
-"""Uncertainty: linear functions of the coefficients with standard errors, and posterior draws.
+"""Uncertainty: linear functions of the coefficients with standard errors, tables, draws.
 
-Bands are Bayesian posterior intervals, β ~ N(β̂, σ²A⁻¹) (Wahba 1983, J. R. Stat. Soc. B 45;
+Bands are Bayesian posterior intervals, β ~ N(β̂, φA⁻¹) (Wahba 1983, J. R. Stat. Soc. B 45;
 Silverman 1985, J. R. Stat. Soc. B 47), which cover across the function (Nychka 1988, J. Am. Stat.
-Assoc. 83). The smoothing parameters count as known.
+Assoc. 83), widened by the uncertainty of the smoothing parameters.
 """
 
 from __future__ import annotations
@@ -30,10 +30,24 @@ def quantile(estimate: Estimate, level: float) -> float:
     The normal's; where the scale is estimated, Student's t on n − τ degrees of freedom.
     """
     check_level(level)
-    if estimate.outcome.scale_known:
+    left = freedom(estimate)
+    if np.isinf(left):
         return float(scipy.stats.norm.ppf(0.5 + level / 2))
-    left = max(estimate.n - float(estimate.column_df.sum()), 1.0)
     return float(scipy.stats.t.ppf(0.5 + level / 2, left))
+
+
+def freedom(estimate: Estimate) -> float:
+    """Degrees of freedom of the scale: n − τ, or infinite where the scale is known."""
+    if estimate.outcome.scale_known:
+        return float("inf")
+    return max(estimate.n - float(estimate.column_df.sum()), 1.0)
+
+
+def uncertain(estimate: Estimate) -> FloatArray:
+    """The root (P, k) of what uncertain smoothing parameters add to the posterior covariance."""
+    if estimate.beyond is None:
+        return estimate.smoothing_spread
+    return np.concatenate([estimate.smoothing_spread, estimate.beyond], axis=1)
 
 
 def check_level(level: float) -> None:
@@ -44,7 +58,8 @@ def check_level(level: float) -> None:
 
 def linear(estimate: Estimate, matrix: DesignMatrix) -> tuple[FloatArray, FloatArray]:
     """Value and standard error of columns · coefficients, each (n,)."""
-    variance = estimate.posterior.variance(matrix)
+    more = (matrix.against(uncertain(estimate)) ** 2).sum(axis=1)
+    variance = estimate.posterior.variance(matrix) + more
     return matrix.times(estimate.coefficients), np.sqrt(np.maximum(variance, 0.0))
 
 
@@ -88,11 +103,12 @@ def coefficients_table(estimate: Estimate, level: float = 0.95) -> pd.DataFrame:
     p = design.p
     change = design.reporting()
     value = change @ estimate.coefficients[:p]
-    covariance = change @ estimate.posterior.dense[:p, :p] @ change.T
+    spread = uncertain(estimate)[:p]
+    covariance = change @ (estimate.posterior.dense[:p, :p] + spread @ spread.T) @ change.T
     error = np.sqrt(np.maximum(np.diag(covariance), 0.0))
     half = quantile(estimate, level) * error
-    left = max(estimate.n - float(estimate.column_df.sum()), 1.0)
-    null = scipy.stats.norm() if estimate.outcome.scale_known else scipy.stats.t(left)
+    left = freedom(estimate)
+    null = scipy.stats.norm() if np.isinf(left) else scipy.stats.t(left)
     with np.errstate(divide="ignore", invalid="ignore"):
         p_value = 2 * null.sf(np.abs(value / error))
     return pd.DataFrame(
@@ -107,38 +123,38 @@ def coefficients_table(estimate: Estimate, level: float = 0.95) -> pd.DataFrame:
     )
 
 
+COMPONENT_COLUMNS = ["effective_df", "p_none", "p_straight", "share", "overlap", "smoothing"]
+
+
 def components_table(estimate: Estimate) -> pd.DataFrame:
-    """One row a component: effective_df, share, smoothing.
+    """One row a component: effective_df, p_none, p_straight, share, overlap, smoothing.
 
     `share` is cov(f_j, η)/var(η) over the data in the prior weights, η without offset and intercept
     (Pratt 1987; Gu 1992, J. Am. Stat. Assoc. 87): the shares sum to 1, and one can be negative.
+    The others are of `significance`; NaN where they were not asked for.
     """
     design = estimate.design
     rows = []
-    for j in range(len(design.components)):
+    for j in range(design.count):
         own = [float(estimate.smoothing[k]) for k in design.blocks_of(j)]
-        rows.append(
-            {
-                "effective_df": estimate.component_df(j),
-                "share": float(estimate.shares[j]),
-                "smoothing": own[0] if len(own) == 1 else np.nan,
-            }
-        )
-    names = [c.name for c in design.components]
-    return pd.DataFrame(
-        rows,
-        index=pd.Index(names, name="component"),
-        columns=["effective_df", "share", "smoothing"],
-    )
+        none, straight, overlap = estimate.answers[j] if estimate.answers else (np.nan,) * 3
+        smoothing = own[0] if len(own) == 1 else np.nan
+        share = float(estimate.shares[j])
+        rows.append([estimate.component_df(j), none, straight, share, overlap, smoothing])
+    names = pd.Index([c.name for c in design.components], name="component")
+    return pd.DataFrame(rows, index=names, columns=COMPONENT_COLUMNS, dtype=np.float64)
 
 
 def posterior_draws(estimate: Estimate, count: int, seed: int) -> FloatArray:
-    """Draws of all coefficients as reported, from N(β̂, σ²A⁻¹), shape (count, P)."""
+    """Draws of all coefficients as reported, smoothing's uncertainty in them, (count, P)."""
     if isinstance(count, bool) or not isinstance(count, Integral) or count < 1:
         raise ModelError(f"The number of draws is a whole number of at least 1; got {count!r}.")
     if isinstance(seed, bool) or not isinstance(seed, Integral) or seed < 0:
         raise ModelError(f"A seed is a whole number of at least 0; got {seed!r}.")
-    draws = estimate.coefficients + estimate.posterior.draws(count, np.random.default_rng(seed))
+    rng = np.random.default_rng(seed)
+    draws = estimate.coefficients + estimate.posterior.draws(count, rng)
+    spread = uncertain(estimate)
+    draws += rng.standard_normal((count, spread.shape[1])) @ spread.T
     p = estimate.design.p
     draws[:, :p] = draws[:, :p] @ estimate.design.reporting().T
     return np.asarray(draws, dtype=np.float64)

@@ -72,6 +72,16 @@ class DesignMatrix:
             result = result + np.where(self.codes >= 0, (self.wide * own).sum(axis=1), 0.0)
         return result
 
+    def against(self, columns: FloatArray) -> FloatArray:
+        """X · columns (P, k), shape (n, k)."""
+        result = self.dense @ columns[: self.layout.dense]
+        if self.layout.parts and columns.shape[1]:
+            known = np.where(self.codes >= 0, 1.0, 0.0)
+            for j, column in enumerate(columns.T):
+                own = self.layout.by_level(column)[self.codes]
+                result[:, j] += known * (self.wide * own).sum(axis=1)
+        return np.asarray(result, dtype=np.float64)
+
     def __len__(self) -> int:
         return len(self.dense)
 

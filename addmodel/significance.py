@@ -11,7 +11,7 @@ the root of its trace, with one common variance.
 from __future__ import annotations
 
 from collections.abc import Sequence
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 from functools import cached_property
 from itertools import pairwise
 from typing import NamedTuple
@@ -29,6 +29,7 @@ from addmodel.solve.quadratic import Solution, factored
 from addmodel.solve.restricted_ratio import Contrasts, p_value
 from addmodel.solve.smoothness import settled_from
 from addmodel.spaces.base import FloatArray
+from addmodel.straight import beyond
 
 PRECISELY = 1e-7
 """Largest gradient of the null fit, as a part of the cost."""
@@ -84,6 +85,40 @@ class Questions:
                 straight = self._penalised(self._null(columns[:0], blocks), columns[:0])
             none = self._none(columns, blocks)
         return Answer(none, straight)
+
+    def overlap(self, component: int) -> float:
+        """How much of a component the others could do, 0 to 1.
+
+        The part of f_j's weighted sum of squares that the other components take away when they are
+        fitted to it, as smooth as they came out; NaN where f_j is nothing.
+        """
+        design, estimate, modes = self.estimate.design, self.estimate, self.laid.modes
+        place = design.unpenalised_places[component]
+        columns = np.arange(place.start, place.stop)
+        alone = np.zeros_like(estimate.coefficients)
+        own = design.places(component)
+        alone[own] = estimate.coefficients[own]
+        rows = modes.rows
+        part = rows.linear_predictor(alone) - rows.linear_predictor(np.zeros_like(alone))
+        smoothing = estimate.smoothing.copy()
+        smoothing[design.blocks_of(component)] = np.inf
+        with one_thread():
+            return modes.without(columns).taken_away(part, smoothing)
+
+    def beyond(self) -> FloatArray:
+        """What smoothing parameters at infinity add to the uncertainty, (P, r)."""
+        estimate = self.estimate
+        if not np.isinf(estimate.smoothing).any():
+            return np.zeros((len(estimate.coefficients), 0))
+        with one_thread():
+            solution = self.laid.modes.solution(estimate.smoothing, estimate.coefficients)
+            return beyond(self.laid, solution, CRITERIA[estimate.criterion])
+
+    def answered(self) -> Estimate:
+        """The estimate with all that its rows are needed for."""
+        estimate = self.estimate
+        answers = [(*self.of([j]), self.overlap(j)) for j in range(estimate.design.count)]
+        return replace(estimate, answers=tuple(answers), beyond=self.beyond())
 
     def _null(self, columns: IntArray, blocks: tuple[int, ...]) -> NullFit:
         """Fit without these unpenalised columns and blocks, from the full fit's λ and β."""

@@ -102,6 +102,14 @@ class Rows(ABC):
         """The same rows without some of the dense columns."""
 
     @abstractmethod
+    def fitted_to(self, part: FloatArray) -> Rows:
+        """The same columns and weights with another outcome (n,), and no offset."""
+
+    @abstractmethod
+    def variation(self) -> float:
+        """The outcome's weighted sum of squares about its mean."""
+
+    @abstractmethod
     def log_det_design(self, p: int, counts: FloatArray) -> float:
         """log|T'T| of the first p columns T, each row counted `counts` (n,) times."""
 

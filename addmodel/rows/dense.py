@@ -113,6 +113,13 @@ class DenseRows(Rows):
         layout = replace(matrix.layout, dense=kept.shape[1])
         return replace(self, matrix=replace(matrix, dense=kept, layout=layout))
 
+    def fitted_to(self, part: FloatArray) -> DenseRows:
+        return replace(self, y=part, offset=np.zeros_like(part))
+
+    def variation(self) -> float:
+        about = self.y - np.average(self.y, weights=self.weights)
+        return float(self.weights @ about**2)
+
     def log_det_design(self, p: int, counts: FloatArray) -> float:
         plain = self.matrix.dense[:, :p] * np.sqrt(counts)[:, None]
         return 2 * float(np.log(np.abs(np.diag(np.linalg.qr(plain)[1]))).sum())

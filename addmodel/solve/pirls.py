@@ -11,7 +11,7 @@ from dataclasses import dataclass, replace
 import numpy as np
 
 from addmodel.matrix import IntArray as IndexArray
-from addmodel.outcomes import Outcome
+from addmodel.outcomes import Outcome, outcome_for
 from addmodel.outcomes.likelihood import Likelihood
 from addmodel.posterior import Posterior
 from addmodel.rows.base import Gram, Rows
@@ -66,6 +66,18 @@ class Modes:
             log_det_design=rows.log_det_design(self.p - len(columns), self.likelihood.counts),
             null=np.delete(self.null, columns),
         )
+
+    def taken_away(self, part: FloatArray, smoothing: FloatArray) -> float:
+        """The part of a vector's (n,) weighted variation that the columns take away at λ."""
+        rows, outcome = self.rows.fitted_to(part), outcome_for("gaussian")
+        likelihood = replace(self.likelihood, outcome=outcome)
+        plain = replace(self, rows=rows, outcome=outcome, likelihood=likelihood)
+        nothing = np.zeros(self.p + sum(self.sizes))
+        problem = plain.quadratic(nothing, fisher=True)
+        total = rows.variation()
+        if not total > 0:
+            return float("nan")
+        return float(np.clip(1 - problem.at(smoothing).deviance / total, 0.0, 1.0))
 
     def solution(self, smoothing: FloatArray, start: FloatArray) -> Solution:
         """The mode at smoothing parameters λ; where the weights do not change, one solve."""
