@@ -59,13 +59,15 @@ def critical(
     return float(np.quantile(largest, level))
 
 
-def draws_of(estimate: Estimate, matrix: DesignMatrix, seed: int) -> FloatArray:
-    """Draws of columns · (coefficients less the estimated ones), (draws, n)."""
+def draws_of(
+    estimate: Estimate, matrix: DesignMatrix, seed: int, count: int | None = None
+) -> FloatArray:
+    """Draws of columns · (coefficients less the estimated ones), (count, n)."""
     rng = np.random.default_rng(seed)
     reduced = estimate.posterior.reduced(matrix)
     used = np.flatnonzero(np.abs(reduced).max(axis=0, initial=0.0) > 0)
     grouped = bool(matrix.layout.parts) and bool(matrix.wide.any())
-    count = FEWER if grouped else DRAWS
+    count = count or (FEWER if grouped else DRAWS)
     root = reduced[:, used] @ _root(estimate.posterior.dense[np.ix_(used, used)])
     root = np.concatenate([root, matrix.against(uncertain(estimate))], axis=1)
     draws = rng.standard_normal((count, root.shape[1])) @ root.T

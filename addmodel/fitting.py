@@ -3,7 +3,7 @@
 from __future__ import annotations
 
 import warnings
-from collections.abc import Sequence
+from collections.abc import Mapping, Sequence
 from dataclasses import dataclass, replace
 from functools import cached_property
 from pathlib import Path
@@ -12,7 +12,10 @@ from typing import TYPE_CHECKING, Any, Literal
 import numpy as np
 import pandas as pd
 
-from addmodel import figures, store
+from addmodel import comparison, figures, store
+from addmodel.averages import average, simulate
+from addmodel.comparison import leave_one_out
+from addmodel.contrasts import Contrast, contrast, slope, turning_points
 from addmodel.data import read
 from addmodel.effects import Effect, effect, effect_to_draw
 from addmodel.errors import Caution, ModelError, nearest
@@ -26,7 +29,7 @@ from addmodel.inference import (
     posterior_draws,
 )
 from addmodel.outcomes import outcome_for
-from addmodel.prediction import model_columns, predict
+from addmodel.prediction import components_named, model_columns, predict
 from addmodel.significance import Questions
 from addmodel.solve.criteria import CRITERIA
 from addmodel.spaces.base import FloatArray
@@ -394,6 +397,141 @@ class Fit:
         """
         return effect(self._sure, component, at=at, level=level)
 
+    def contrast(
+        self,
+        component: str,
+        reference: object = "median",
+        at: object = None,
+        by: str | None = None,
+        per: float | None = None,
+        scale: Literal["outcome", "link"] = "outcome",
+        level: float = 0.95,
+        seed: int = DEFAULT_SEED,
+    ) -> Contrast:
+        """A component's difference from a reference, with its own band (of no width there).
+
+        Parameters
+        ----------
+        component : str
+            Its name, or a sum of components.
+        reference : optional
+            A value of the covariate, a mapping of several covariates' values, "median" (of levels
+            the most frequent), "minimum" or "maximum" (of the curve; where that is uncertain, the
+            band says so).
+        at : sequence or mapping, optional
+            Where; as for `effect`.
+        by : str, optional
+            A covariate that keeps each row's own value: one contrast for each of its levels.
+        per : float, optional
+            Instead of a reference: the difference that so much more of the covariate makes.
+        scale : {"outcome", "link"}
+            Ratios where the link makes them so (rate ratio, odds ratio), or differences on the
+            link's scale.
+        level, seed
+            Level of the bands; seed of the simultaneous one.
+        """
+        return contrast(
+            self._sure,
+            component,
+            reference=reference,
+            at=at,
+            by=by,
+            per=per,
+            scale=scale,
+            level=level,
+            seed=seed,
+        )
+
+    def slope(
+        self, component: str, order: int = 1, at: object = None, level: float = 0.95
+    ) -> pd.DataFrame:
+        """First (or second) derivative of a curve, on the link's scale.
+
+        The covariate, slope, std_error, lower, upper, lower_whole, upper_whole, and direction:
+        rising or falling where the simultaneous band says so, else unclear.
+        """
+        return slope(self._sure, component, order=order, at=at, level=level)
+
+    def turning_points(
+        self, component: str, at: object = None, level: float = 0.95, seed: int = DEFAULT_SEED
+    ) -> pd.DataFrame:
+        """Where a curve is highest and lowest: point, at, lower, upper, inside.
+
+        The interval is over posterior draws whose extreme is inside the data's range; ``inside`` is
+        their share: where it is small, the curve rather has its extreme at an end.
+        """
+        return turning_points(self._sure, component, at=at, level=level, seed=seed)
+
+    def test(self, *names: str) -> pd.Series[float]:
+        """Joint test of components, or of all that contain a covariate: p_none and p_straight.
+
+        ``fit.test("age")`` asks for everything with age in it, interactions too; with
+        ``fit.test("curve(age)", "age:site")`` for these together.
+        """
+        design = self.estimate.design
+        chosen: list[int] = []
+        for name in names:
+            held = [
+                j
+                for j, c in enumerate(design.components)
+                if isinstance(name, str) and any(design.columns[k].name == name for k in c.keys)
+            ]
+            chosen += held or components_named(self.estimate, name)
+        if not chosen:
+            raise ModelError("Name at least one component or covariate to test.")
+        answer = Questions(self.estimate).of(sorted(set(chosen)))
+        return pd.Series({"p_none": answer.none, "p_straight": answer.straight})
+
+    def simulate(
+        self,
+        new: object,
+        count: int = 1000,
+        seed: int = DEFAULT_SEED,
+        what: Literal["mean", "outcome"] = "mean",
+        per: float | None = None,
+    ) -> FloatArray:
+        """Draws of predictions at new rows, shape (count, n), for any total or ratio of them.
+
+        "mean": of the mean, with the coefficients' uncertainty; "outcome": of new outcomes.
+        """
+        return simulate(self._sure, new, count, seed=seed, what=what, per=per)
+
+    def average(
+        self,
+        settings: Mapping[str, object],
+        over: object,
+        weights: object = None,
+        level: float = 0.95,
+        seed: int = DEFAULT_SEED,
+        per: float | None = None,
+    ) -> pd.DataFrame:
+        """Standardised averages, and their differences and ratios (Lane & Nelder 1982,
+        Biometrics 38).
+
+        Parameters
+        ----------
+        settings : mapping
+            Covariates and the values that all rows are given, such as ``{"arm": ["a", "b"]}``; all
+            combinations, the first being the one that the others are compared with.
+        over : table, mapping or path
+            The rows over which predictions are averaged.
+        weights : array (n,), optional
+            Of the rows.
+
+        Returns
+        -------
+        DataFrame
+            A row a setting: average, difference and ratio, each with lower and upper.
+        """
+        return average(self._sure, settings, over, weights=weights, level=level, seed=seed, per=per)
+
+    def leave_one_out(self) -> FloatArray:
+        """Each row's deviance when it is left out, from leverages, λ held, shape (n,).
+
+        Exact for a Gaussian outcome, else to one Newton step.
+        """
+        return leave_one_out(self.estimate)
+
     def plot(self) -> Figure:
         """A sheet of all components' effects, on one scale."""
         design = self.estimate.design
@@ -435,3 +573,19 @@ def load(path: str | Path) -> Fit:
 _ROWLESS = (
     "This fit was loaded from a file, which holds no rows: predict(data) gives fitted values anew."
 )
+
+
+def compare(*fits: Fit, **named: Fit) -> pd.DataFrame:
+    """Models side by side: effective_df, aic (corrected), the criterion, what is left out.
+
+    ``am.compare(a, b)`` or with names ``am.compare(small=a, large=b)``. All fitted to the same
+    rows. ``left_out_deviance`` is the sum of every row's deviance when it is left out (from
+    leverages), with its standard error: smaller is better, as with ``aic``.
+
+    Raises
+    ------
+    ModelError
+        If the fits are of different rows or outcomes.
+    """
+    every = {f"{k + 1}: {fit.formula}": fit for k, fit in enumerate(fits)} | named
+    return comparison.compare({name: fit.estimate for name, fit in every.items()})

@@ -145,6 +145,11 @@ def components_table(estimate: Estimate) -> pd.DataFrame:
     return pd.DataFrame(rows, index=names, columns=COMPONENT_COLUMNS, dtype=np.float64)
 
 
+def normal_words(p: float) -> str:
+    """ "= 0.012" or "< 0.001"."""
+    return "< 0.001" if p < 0.001 else f"= {p:.3f}"
+
+
 def posterior_draws(estimate: Estimate, count: int, seed: int) -> FloatArray:
     """Draws of all coefficients as reported, smoothing's uncertainty in them, (count, P)."""
     if isinstance(count, bool) or not isinstance(count, Integral) or count < 1:

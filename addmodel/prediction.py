@@ -51,7 +51,7 @@ def predict(
         raise ModelError(
             "An interval for a new observation needs the whole model: no only=/without=."
         )
-    roles, known = _offsets(estimate, per) if only is None else ({}, 0.0)
+    roles, known = offsets_of(estimate, per) if only is None else ({}, 0.0)
     design = estimate.design
     keys = {key for j in chosen for key in design.components[j].keys}
     rows = new_rows(estimate, new, unseen=unseen, missing=missing, roles=roles, keys=keys)
@@ -128,6 +128,24 @@ def predict(
     )
 
 
+def mean_at(estimate: Estimate, new: object, per: float | None) -> FloatArray:
+    """The predicted mean at new rows, (n,)."""
+    found = predict(
+        estimate,
+        new,
+        scale="outcome",
+        interval=None,
+        new_observation=False,
+        only=None,
+        without=None,
+        per=per,
+        unseen="error",
+        groups="own",
+        missing="error",
+    )
+    return np.asarray(found, dtype=np.float64)
+
+
 def observation_interval(
     estimate: Estimate, eta: FloatArray, error: FloatArray, level: float
 ) -> tuple[FloatArray, FloatArray, FloatArray]:
@@ -146,7 +164,7 @@ def observation_interval(
     return limits[0], limits[1], limits[2]
 
 
-def _offsets(estimate: Estimate, per: float | None) -> tuple[dict[str, str], float]:
+def offsets_of(estimate: Estimate, per: float | None) -> tuple[dict[str, str], float]:
     """Expressions to be found in the new rows for the offset, and a constant beside them."""
     given = {k: v for k, v in estimate.arguments.items() if k in ("offset", "exposure")}
     known = 0.0

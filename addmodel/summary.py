@@ -2,14 +2,19 @@
 
 from __future__ import annotations
 
+import html
 import textwrap
+from collections.abc import Sequence
 from dataclasses import dataclass
+from pathlib import Path
 
 import numpy as np
 import pandas as pd
 
 from addmodel.estimate import Estimate
+from addmodel.files import replacing
 from addmodel.inference import coefficients_table, components_table
+from addmodel.sentences import overlap_cautions, sentence
 from addmodel.spaces.base import Space
 from addmodel.spaces.cycle import Cycle
 from addmodel.spaces.globe import Globe
@@ -33,6 +38,8 @@ class Summary:
         The model in words.
     components, coefficients : pandas.DataFrame
         The two tables.
+    sentences : tuple of str
+        For each component one sentence, made from its numbers.
     cautions : tuple of str
         What the reader should know before using the numbers.
     recipe : str
@@ -43,6 +50,7 @@ class Summary:
     words: str
     components: pd.DataFrame
     coefficients: pd.DataFrame
+    sentences: tuple[str, ...]
     cautions: tuple[str, ...]
     recipe: str
 
@@ -52,7 +60,8 @@ class Summary:
             ("The model in words", _wrapped(self.words)),
         ]
         if len(self.components):
-            parts.append(("Components", _components_text(self.components)))
+            told = "\n".join(_wrapped(s, first="- ") for s in self.sentences)
+            parts.append(("Components", f"{_components_text(self.components)}\n\n{told}"))
         parts.append(("Coefficients", _coefficients_text(self.coefficients)))
         cautions = "\n".join(_wrapped(c, first="- ") for c in self.cautions)
         if cautions:
@@ -62,15 +71,78 @@ class Summary:
 
     __repr__ = __str__
 
+    def _tables(self) -> list[tuple[str, pd.DataFrame]]:
+        tables = [("Components", components_shown(self.components))] if len(self.components) else []
+        return [*tables, ("Coefficients", coefficients_shown(self.coefficients))]
+
+    def markdown(self) -> str:
+        """The summary as Markdown."""
+        parts = [f"## How the fit went\n\n{self.how}", f"## The model in words\n\n{self.words}"]
+        for title, table in self._tables():
+            rows = [["", *table.columns], ["---"] * (1 + table.shape[1])]
+            rows += [[str(i), *map(str, r)] for i, r in zip(table.index, table.values, strict=True)]
+            lines = "\n".join("| " + " | ".join(row) + " |" for row in rows)
+            told = _bullets(self.sentences) if title == "Components" else ""
+            parts.append(f"## {title}\n\n{lines}{told}")
+        if self.cautions:
+            parts.append("## Cautions" + _bullets(self.cautions))
+        parts.append(f"## To refit this model\n\n    {self.recipe}")
+        return "\n\n".join(parts) + "\n"
+
+    def html(self) -> str:
+        """The summary as a piece of HTML."""
+        say = html.escape
+        parts = [f"<h3>How the fit went</h3><p>{say(self.how)}</p>"]
+        parts.append(f"<h3>The model in words</h3><p>{say(self.words)}</p>")
+        for title, table in self._tables():
+            body = table.to_html(border=0, escape=True)
+            told = "".join(f"<li>{say(s)}</li>" for s in self.sentences)
+            told = f"<ul>{told}</ul>" if title == "Components" else ""
+            parts.append(f"<h3>{title}</h3>{body}{told}")
+        if self.cautions:
+            listed = "".join(f"<li>{say(c)}</li>" for c in self.cautions)
+            parts.append(f"<h3>Cautions</h3><ul>{listed}</ul>")
+        parts.append(f"<h3>To refit this model</h3><pre>{say(self.recipe)}</pre>")
+        return "\n".join(parts)
+
+    def _repr_html_(self) -> str:
+        return self.html()
+
+    def latex(self) -> str:
+        """Both tables for LaTeX with booktabs."""
+        found = []
+        for title, table in self._tables():
+            head = " & ".join(["", *(_tex(c) for c in table.columns)]) + r" \\"
+            rows = [
+                " & ".join(_tex(str(v)) for v in [i, *r]) + r" \\"
+                for i, r in zip(table.index, table.values, strict=True)
+            ]
+            columns = "l" + "r" * table.shape[1]
+            body = "\n".join(rows)
+            found.append(
+                f"% {title}\n\\begin{{tabular}}{{{columns}}}\n\\toprule\n{head}\n\\midrule\n"
+                f"{body}\n\\bottomrule\n\\end{{tabular}}\n"
+            )
+        return "\n".join(found)
+
+    def csv(self, folder: str | Path) -> None:
+        """Write components.csv and coefficients.csv, with all digits, to a folder."""
+        target = Path(folder)
+        target.mkdir(parents=True, exist_ok=True)
+        for name, table in (("components", self.components), ("coefficients", self.coefficients)):
+            with replacing(target / f"{name}.csv") as temporary:
+                table.to_csv(temporary)
+
 
 def summarise(estimate: Estimate) -> Summary:
-    """The summary of what was estimated."""
+    """The summary of what was estimated, its components' tests answered."""
     return Summary(
         how=_how(estimate),
         words=_words(estimate),
         components=components_table(estimate),
         coefficients=coefficients_table(estimate),
-        cautions=estimate.cautions,
+        sentences=tuple(sentence(estimate, j) for j in range(estimate.design.count)),
+        cautions=(*estimate.cautions, *overlap_cautions(estimate)),
         recipe=_recipe(estimate),
     )
 
@@ -241,16 +313,33 @@ def _wrapped(text: str, first: str = "") -> str:
     )
 
 
-def _components_text(table: pd.DataFrame) -> str:
-    shown = pd.DataFrame(
+def components_shown(table: pd.DataFrame) -> pd.DataFrame:
+    """The table of components as it is printed."""
+    return pd.DataFrame(
         {
             "effective df": [f"{v:.2f}" for v in table["effective_df"]],
+            "p: none": [_p_text(v) for v in table["p_none"]],
+            "p: straight": [_p_text(v) for v in table["p_straight"]],
             "share": [_percent(v) for v in table["share"]],
+            "overlap": ["" if np.isnan(v) else f"{v:.2f}" for v in table["overlap"]],
             "smoothing": [_smoothing_text(v) for v in table["smoothing"]],
         },
         index=list(table.index),
     )
-    return textwrap.indent(shown.to_string(), "  ")
+
+
+def _components_text(table: pd.DataFrame) -> str:
+    return textwrap.indent(components_shown(table).to_string(), "  ")
+
+
+def _bullets(lines: Sequence[str]) -> str:
+    return "\n\n" + "\n".join(f"- {line}" for line in lines) if lines else ""
+
+
+def _tex(text: str) -> str:
+    for plain, written in (("\\", r"\textbackslash "), *((c, "\\" + c) for c in "&%$#_{}")):
+        text = text.replace(plain, written)
+    return text.replace("<", "$<$").replace("~", r"\textasciitilde ").replace("^", r"\^{}")
 
 
 def _quoted(value: str) -> str:
@@ -268,8 +357,9 @@ def _smoothing_text(value: float) -> str:
     return "infinite" if np.isinf(value) else f"{value:.3g}"
 
 
-def _coefficients_text(table: pd.DataFrame) -> str:
-    shown = pd.DataFrame(
+def coefficients_shown(table: pd.DataFrame) -> pd.DataFrame:
+    """The table of coefficients as it is printed."""
+    return pd.DataFrame(
         {
             "estimate": [f"{v:.5g}" for v in table["estimate"]],
             "std. error": [f"{v:.3g}" for v in table["std_error"]],
@@ -281,7 +371,10 @@ def _coefficients_text(table: pd.DataFrame) -> str:
         },
         index=list(table.index),
     )
-    return textwrap.indent(shown.to_string(), "  ")
+
+
+def _coefficients_text(table: pd.DataFrame) -> str:
+    return textwrap.indent(coefficients_shown(table).to_string(), "  ")
 
 
 def _p_text(value: float) -> str:

@@ -18,6 +18,7 @@ from multiprocessing import Pool
 import numpy as np
 
 import addmodel as am
+from addmodel.bands import band
 from tests.models import gw_terms
 from validation.results import section
 
@@ -80,7 +81,7 @@ Job = tuple[Callable[[np.random.Generator, int, str], Sample], int, str, int]
 
 
 def one(job: Job) -> list[tuple[str, float, bool, bool]]:
-    """For each component: coverage across the points, of the whole, whether it came out straight."""
+    """For each component: coverage across the points, of the whole, whether it is straight."""
     warnings.simplefilter("ignore")
     make, n, outcome, seed = job
     data, formula, outcome, truth = make(np.random.default_rng(seed), n, outcome)
@@ -91,14 +92,11 @@ def one(job: Job) -> list[tuple[str, float, bool, bool]]:
     for j, (name, f) in enumerate(truth.items()):
         design = fit._sure.design
         values = {k: c.values for k, c in fit.estimate.table.columns.items()}
-        both = am.bands.band(fit._sure, design.of_components(values, n, [j]), 0.95)
+        both = band(fit._sure, design.of_components(values, n, [j]), 0.95)
         # A group's effects are about zero, a curve's about its average over the data.
         about = f if name.startswith("group") else f - f.mean()
-        if name.startswith("group"):
-            both_value = both.value
-        else:
-            both_value = both.value - both.value.mean()
-        off = np.abs(both_value - about)
+        centre = 0.0 if name.startswith("group") else both.value.mean()
+        off = np.abs(both.value - centre - about)
         found.append(
             (
                 name,

@@ -106,6 +106,10 @@ class Rows(ABC):
         """The same columns and weights with another outcome (n,), and no offset."""
 
     @abstractmethod
+    def variances(self, inner: Posterior) -> FloatArray:
+        """x_i'Mx_i of each row, M = `inner`, (n,)."""
+
+    @abstractmethod
     def variation(self) -> float:
         """The outcome's weighted sum of squares about its mean."""
 

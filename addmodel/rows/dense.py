@@ -116,6 +116,9 @@ class DenseRows(Rows):
     def fitted_to(self, part: FloatArray) -> DenseRows:
         return replace(self, y=part, offset=np.zeros_like(part))
 
+    def variances(self, inner: Posterior) -> FloatArray:
+        return inner.variance(self.matrix)
+
     def variation(self) -> float:
         about = self.y - np.average(self.y, weights=self.weights)
         return float(self.weights @ about**2)
