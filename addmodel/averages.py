@@ -4,7 +4,7 @@ from __future__ import annotations
 
 import itertools
 from collections.abc import Mapping
-from typing import Literal
+from typing import Any, Literal
 
 import numpy as np
 import pandas as pd
@@ -73,10 +73,10 @@ def average(
     mass = np.ones(len(base)) if weights is None else np.asarray(weights, dtype=np.float64)
     if mass.shape != (len(base),) or not (mass >= 0).all() or not mass.sum() > 0:
         raise ModelError(f"weights= are {len(base)} numbers of at least 0, one for each row.")
-    listed: dict[str, list[object]] = {
-        str(key): [*v] if isinstance(v, list | tuple | np.ndarray) else [v]
-        for key, v in settings.items()
-    }
+    listed: dict[str, list[Any]] = {}
+    for key, value in settings.items():
+        several: Any = value if isinstance(value, list | tuple | np.ndarray) else [value]
+        listed[str(key)] = list(several)
     for key in listed:
         if key not in base.columns:
             raise ModelError(f"settings= names '{key}', which the rows do not have.")

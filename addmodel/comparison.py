@@ -48,7 +48,7 @@ def compare(estimates: dict[str, Estimate]) -> pd.DataFrame:
 
 
 def leave_one_out(estimate: Estimate) -> FloatArray:
-    """Each row's deviance when it is left out, λ held, (n,): exact for Gaussian rows, else one step.
+    """Each row's deviance when it is left out, λ held, (n,): exact for Gaussian rows, else a step.
 
     η_i without row i is η_i − h_i r_i/(1 − h_i w_i) with r the slope and w the working weight of
     row i, h_i = x_i'A⁻¹x_i (Cook & Weisberg 1982, Residuals and Influence in Regression).

@@ -3,7 +3,7 @@
 from __future__ import annotations
 
 from collections.abc import Mapping, Sequence
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 from typing import Any
 
 import numpy as np
@@ -16,7 +16,7 @@ from addmodel.errors import ModelError
 from addmodel.estimate import Estimate
 from addmodel.formula import find_sum
 from addmodel.grids import Axis, axes, product, shown, values_given
-from addmodel.inference import DEFAULT_SEED, quantile
+from addmodel.inference import DEFAULT_SEED, quantile, uncertain
 from addmodel.matrix import DesignMatrix
 from addmodel.spaces.base import FloatArray, Values
 from addmodel.spaces.cycle import Cycle
@@ -71,6 +71,8 @@ def contrast(
     """See `Fit.contrast`."""
     chosen = chosen_of(estimate, name)
     found = axes(estimate, chosen, at)
+    if at is None and per is None:
+        found = _with_reference(estimate, found, reference)
     values, n = product(found)
     if per is not None:
         axis = _number(found, name)
@@ -95,6 +97,27 @@ def contrast(
         columns = {k: v if k == "std_error" else np.exp(v) for k, v in columns.items()}
     table = pd.DataFrame({**shown(values, estimate.design.columns), **columns})
     return Contrast(name, ratio or "difference", words, table, _covariance(estimate, matrix))
+
+
+def _with_reference(
+    estimate: Estimate, found: Sequence[Axis], reference: object
+) -> tuple[Axis, ...]:
+    """The reference among the places shown: there the band has no width."""
+    running = [axis for axis in found if axis.kind == "number"]
+    if len(running) != 1 or isinstance(reference, Mapping):
+        return tuple(found)
+    key = running[0].keys[0]
+    if reference == "median":
+        quantiles = estimate.design.spreads[key].quantiles
+        place = float(quantiles[len(quantiles) // 2])
+    elif isinstance(reference, str) and estimate.design.columns[key].kind != "date":
+        return tuple(found)
+    else:
+        place = float(values_given(estimate.design.columns[key], reference)[0])
+    if not running[0].values.min() <= place <= running[0].values.max():
+        return tuple(found)
+    more = np.unique(np.append(running[0].values, place))
+    return tuple(replace(a, values=more) if a is running[0] else a for a in found)
 
 
 def ratio_words(estimate: Estimate) -> str | None:
@@ -225,7 +248,9 @@ def _against_extreme(
     places = values[key][(sign * draws).argmin(axis=1)]
     low, high = np.quantile(places, [0.5 - level / 2, 0.5 + level / 2])
     point = shown({key: np.array([values[key][best], low, high])}, estimate.design.columns)
-    first, low_words, high_words = (str(v) for v in next(iter(point.values())))
+    first, low_words, high_words = (
+        f"{v:.4g}" if isinstance(v, float) else str(v)[:16] for v in next(iter(point.values()))
+    )
     words = f"its {which}, at {key} = {first} ({low_words} to {high_words})"
     there: dict[str, npt.NDArray[Any]] = {k: np.full(n, v[best]) for k, v in values.items()}
     difference = matrix.minus(estimate.design.of_components(there, n, chosen))
@@ -233,8 +258,6 @@ def _against_extreme(
 
 
 def _covariance(estimate: Estimate, matrix: DesignMatrix) -> FloatArray:
-    from addmodel.inference import uncertain
-
     spread = matrix.against(uncertain(estimate))
     covariance: FloatArray = estimate.posterior.covariance(matrix) + spread @ spread.T
     return covariance
@@ -278,8 +301,6 @@ def slope(
 
 
 def _scaled(matrix: DesignMatrix, factor: float) -> DesignMatrix:
-    from dataclasses import replace
-
     return replace(matrix, dense=matrix.dense * factor, wide=matrix.wide * factor)
 
 

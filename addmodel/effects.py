@@ -2,8 +2,9 @@
 
 from __future__ import annotations
 
-from collections.abc import Sequence
+from collections.abc import Mapping, Sequence
 from dataclasses import dataclass, replace
+from types import MappingProxyType
 from typing import TYPE_CHECKING, Literal
 
 import numpy as np
@@ -27,6 +28,7 @@ from addmodel.spaces.scattered import Scattered
 if TYPE_CHECKING:
     from matplotlib.axes import Axes
 
+NO_UNITS: Mapping[str, str] = MappingProxyType({})
 MOST_NAMED = 40
 """Groups up to which a figure names each."""
 
@@ -60,7 +62,14 @@ class Effect:
         return figures.draw(self.panel, ax)
 
 
-def effect(estimate: Estimate, name: str, *, at: object, level: float) -> Effect:
+def effect(
+    estimate: Estimate,
+    name: str,
+    *,
+    at: object,
+    level: float,
+    units: Mapping[str, str] = NO_UNITS,
+) -> Effect:
     """See `Fit.effect`."""
     if not isinstance(name, str):
         raise ModelError(f"Name one component, such as 'curve(x)'; got {name!r}.")
@@ -75,10 +84,43 @@ def effect(estimate: Estimate, name: str, *, at: object, level: float) -> Effect
     if len(running) > 1:
         table["outside"] = ~near_data(estimate, found, values)
     whole = known[chosen[0]] if len(chosen) == 1 else name
-    picture = _picture(estimate, found, table, matrix, level, values)
+    picture = _with_units(_picture(estimate, found, table, matrix, level, values), units)
     if not isinstance(picture, figures.Panel):
         picture = replace(picture, caption=_caption(estimate, whole, found, picture))
     return Effect(whole, table, picture)
+
+
+def _with_units(picture: figures.AnyPanel, units: Mapping[str, str]) -> figures.AnyPanel:
+    """Units on the axes, from a mapping of covariates' names; the outcome's belongs to effects."""
+
+    def named(label: str) -> str:
+        unit = units.get(label.split(",")[0])
+        return f"{label}, {unit}" if unit else label
+
+    if isinstance(picture, figures.Panel):
+        return replace(picture, covariate=named(picture.covariate))
+    picture = replace(picture, across=replace(picture.across, label=named(picture.across.label)))
+    if isinstance(picture, joints.Surface):
+        return replace(picture, upward=replace(picture.upward, label=named(picture.upward.label)))
+    return picture
+
+
+def partial_residuals(estimate: Estimate, component: int) -> FloatArray:
+    """The covariate, and the component plus the working residual, of each row, (n, 2).
+
+    None where the component has more than one covariate, or levels.
+    """
+    c = estimate.design.components[component]
+    table, eta = estimate.table, estimate.linear_predictor
+    if len(c.keys) != 1 or isinstance(c.single, Levels | Group) or table is None or eta is None:
+        return np.empty((0, 2))
+    values = {key: column.values for key, column in table.columns.items()}
+    part = estimate.design.of_components(values, len(eta), [component])
+    curvature = estimate.outcome.curvature(table.outcome, eta, table.prior)
+    residual = curvature.slope / np.maximum(curvature.fisher, 1e-300)
+    x = values[c.keys[0]]
+    at = within(c.single, x) if isinstance(c.single, Cycle) else x
+    return np.column_stack([at, part.times(estimate.coefficients) + residual])
 
 
 def banded(name: str, both: Band) -> dict[str, FloatArray]:
@@ -110,19 +152,21 @@ def _caption(
     return ", ".join([name, *held])
 
 
-def effect_to_draw(estimate: Estimate, component: int) -> Effect:
+def effect_to_draw(
+    estimate: Estimate, component: int, units: Mapping[str, str] = NO_UNITS
+) -> Effect:
     """A component's effect as a sheet shows it: curves by level together with their margins.
 
     The deviations are beside them; a surface is the component alone.
     """
     design = estimate.design
     name = design.components[component].name
-    alone = effect(estimate, name, at=None, level=0.95)
+    alone = effect(estimate, name, at=None, level=0.95, units=units)
     if not isinstance(alone.panel, joints.Family):
         return alone
     own = {f.name for f in estimate.model.terms[component].factors}
     names = [t.name for t in estimate.model.terms if {f.name for f in t.factors} <= own]
-    together = effect(estimate, " + ".join(names), at=None, level=0.95)
+    together = effect(estimate, " + ".join(names), at=None, level=0.95, units=units)
     if not isinstance(together.panel, joints.Family):
         return alone
     panel = replace(together.panel, caption=f"{name}, with its margins")

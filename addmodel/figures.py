@@ -1,8 +1,9 @@
 """Figures of components: one panel, a sheet of all of them, and their files.
 
 A panel is plain numbers. The effect is a deep line over a band in two tints: the darker one holds
-the central 98 % of the data, the paler one the sparse ends. A strip at the foot shows the density
-of the data; levels are rows with their share of the data in the margin. Nothing needs a display.
+at each point, the paler one as a whole (where only the former is given, the paler tint stands at
+the sparse ends, outside the central 98 % of the data). A strip at the foot shows the density of the
+data; levels are rows with their share of the data in the margin. Nothing needs a display.
 """
 
 from __future__ import annotations
@@ -238,8 +239,15 @@ def _paint_number(panel: Panel, ax: Axes, limits: Limits, width: float) -> None:
     foot = STRIP if len(panel.quantiles) else 0.0
     start, stop = _core(panel) or (low, high)
     inner = np.concatenate([[start], x[(x > start) & (x < stop)], [stop]])
-    for at, tint in ((x, PALE), (inner, TINT)):
-        edges = (np.interp(at, x, lower), np.interp(at, x, upper))
+    both = len(panel.lower_whole) > 0
+    wide_lower, wide_upper = (
+        (panel.lower_whole, panel.upper_whole) if both else (panel.lower, panel.upper)
+    )
+    for at, tint, low_edge, high_edge in (
+        (x, PALE, *_around(panel, x, wide_lower, wide_upper)),
+        (x if both else inner, TINT, lower, upper),
+    ):
+        edges = (np.interp(at, x, low_edge), np.interp(at, x, high_edge))
         band = ax.fill_between(at + shift, *edges, color=tint, linewidth=0, zorder=1.0)
         band.set_clip_path(Rectangle((0, foot), 1, 1 - foot, transform=ax.transAxes))
     if foot:
@@ -247,7 +255,21 @@ def _paint_number(panel: Panel, ax: Axes, limits: Limits, width: float) -> None:
         strip = ax.imshow(shades, aspect="auto", interpolation="bilinear", zorder=1.5)
         strip.set(transform=ax.get_xaxis_transform(), extent=(*ends, 0.0, STRIP))
     ax.axhline(0.0, color=FAINT, linewidth=0.6, zorder=2.0)
+    if len(panel.points):
+        at, value = panel.points.T
+        ax.plot(at + shift, value, ".", color=FAINT, markersize=1.6, alpha=0.5, zorder=1.8)
     ax.plot(x + shift, effect, color=DEEP, linewidth=1.6, solid_capstyle="butt", zorder=3.0)
+
+
+def _around(
+    panel: Panel, x: FloatArray, lower: FloatArray, upper: FloatArray
+) -> tuple[FloatArray, FloatArray]:
+    """A band at the places x that are drawn; of a cycle they begin and end at its seam."""
+    if panel.kind != "cycle":
+        return lower, upper
+    turn = 1.0 if isinstance(panel.period, str) else float(panel.period or x[-1])
+    around = (np.interp(x, panel.x, v, period=turn) for v in (lower, upper))
+    return next(around), next(around)
 
 
 def _paint_ranked(panel: Panel, ax: Axes, limits: Limits) -> None:
@@ -363,10 +385,13 @@ def _key(panels: Sequence[Panel], double: Sequence[joints.Picture]) -> str:
     families = [p for p in double if isinstance(p, joints.Family)]
     levels = sorted({p.level for p in panels} | {p.level for p in families})
     level = " or ".join(f"{100 * each:g} %" for each in levels)
+    both = any(len(p.lower_whole) for p in panels)
     pale = ", paler outside the central 98 % of the data" if any(map(_core, panels)) else ""
+    pale = f", paler: {level} as a whole" if both else pale
     parts = [
         any(p.kind not in ("levels", "ranked") for p in panels)
         * f"Band: {level} at each point{pale}; it may run past the edge. Zero: the data's average.",
+        any(len(p.points) for p in panels) * "Points: partial residuals.",
         any(len(p.quantiles) for p in panels) * "Strip: the darker, the more data.",
         any(p.kind == "levels" for p in panels) * f"Bars of levels: {level} interval.",
         any(len(p.shares) for p in panels) * "Margin: share of the data.",

@@ -17,7 +17,7 @@ from addmodel.averages import average, simulate
 from addmodel.comparison import leave_one_out
 from addmodel.contrasts import Contrast, contrast, slope, turning_points
 from addmodel.data import read
-from addmodel.effects import Effect, effect, effect_to_draw
+from addmodel.effects import Effect, effect, effect_to_draw, partial_residuals
 from addmodel.errors import Caution, ModelError, nearest
 from addmodel.estimate import Estimate, Progress, estimate
 from addmodel.formula import parse
@@ -30,6 +30,7 @@ from addmodel.inference import (
 )
 from addmodel.outcomes import outcome_for
 from addmodel.prediction import components_named, model_columns, predict
+from addmodel.sentences import sentence
 from addmodel.significance import Questions
 from addmodel.solve.criteria import CRITERIA
 from addmodel.spaces.base import FloatArray
@@ -380,8 +381,14 @@ class Fit:
             missing=missing,
         )
 
-    def effect(self, component: str, at: object = None, level: float = 0.95) -> Effect:
-        """A component's partial effect with its pointwise band.
+    def effect(
+        self,
+        component: str,
+        at: object = None,
+        level: float = 0.95,
+        units: Mapping[str, str] | None = None,
+    ) -> Effect:
+        """A component's partial effect with its pointwise and its simultaneous band.
 
         Parameters
         ----------
@@ -393,9 +400,11 @@ class Fit:
             or every level. Of more than two numbers the others are held at their median, of a
             straight line beside a curve at its 10, 50 and 90 % points.
         level : float
-            Level of the band.
+            Level of the bands.
+        units : mapping, optional
+            Units of covariates by their names, for the figure's axes.
         """
-        return effect(self._sure, component, at=at, level=level)
+        return effect(self._sure, component, at=at, level=level, units=units or {})
 
     def contrast(
         self,
@@ -532,12 +541,40 @@ class Fit:
         """
         return leave_one_out(self.estimate)
 
-    def plot(self) -> Figure:
-        """A sheet of all components' effects, on one scale."""
+    def plot(
+        self,
+        units: Mapping[str, str] | None = None,
+        residuals: bool = False,
+        sentences: bool = True,
+        width: float = 180.0,
+    ) -> Figure:
+        """A sheet of all components' effects, on one scale.
+
+        Parameters
+        ----------
+        units : mapping, optional
+            Units of covariates by their names, such as ``{"temp": "°C"}``.
+        residuals : bool
+            Whether partial residuals are drawn behind the curves.
+        sentences : bool
+            Whether each component's sentence, with its p, is printed below it.
+        width : float
+            Millimetres.
+        """
         design = self.estimate.design
         if not design.count:
             raise ModelError("The model has no components to draw.")
-        return figures.sheet([effect_to_draw(self._sure, j).panel for j in range(design.count)])
+        panels = []
+        for j in range(design.count):
+            panel = effect_to_draw(self._sure, j, units or {}).panel
+            if isinstance(panel, figures.Panel) and residuals:
+                panel = replace(panel, points=partial_residuals(self.estimate, j))
+            if sentences:
+                told = sentence(self._answered, j)
+                held = panel.caption.removeprefix(design.components[j].name).lstrip(", ")
+                panel = replace(panel, caption=f"{told} {held}".strip())
+            panels.append(panel)
+        return figures.sheet(panels, width)
 
     def columns(self, new: object) -> pd.DataFrame:
         """The model's columns at new rows, (n, P); columns @ coefficients = linear predictor.

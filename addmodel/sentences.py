@@ -118,7 +118,8 @@ def _line(table: pd.DataFrame, key: str) -> str:
 def _stretches(table: pd.DataFrame) -> str:
     """Rising, falling and neither, along the covariate."""
     name = table.columns[0]
-    direction = table["direction"].to_numpy()
+    rising, falling = table["lower"] > 0, table["upper"] < 0  # point by point
+    direction = np.select([rising, falling], ["rising", "falling"], "unclear")
     starts = np.flatnonzero(np.append(True, direction[1:] != direction[:-1]))
     stops = np.append(starts[1:], len(direction))
     runs = [

@@ -4,12 +4,13 @@ The first-order term J V_ρ J' vanishes where a smoothing parameter ran to infin
 is needed: the data cannot tell no bend from a little. There the posterior is integrated over that
 parameter, the others held (Rue, Martino & Chopin 2009, J. R. Stat. Soc. B 71):
 
-    E[(β − β̂)(β − β̂)'] = Σ_g w_g [V_g + (β_g − β̂)(β_g − β̂)'],  w_g ∝ exp(−cost(λ_g)) λ_g^{-¼} Δ,
+    E[(β − β̂)(β − β̂)'] = Σ_g w_g [V_g + (β_g − β̂)(β_g − β̂)'],  w_g ∝ exp(−cost(λ_g)) λ_g^{-1/10} Δ,
 
 over a grid of log λ. The prior of the standard deviation τ of the block's functions, in proportion
-to λ^{-½}, is then τ^{-½}: between the flat one (Gelman 2006, Bayesian Anal. 1), whose bands covered
-97 to 98 % in trials, and 1/τ, whose bands fell below 88 % for weak quadratics (validation/coverage).
-What that is beyond V is positive semi-definite, of low rank, and kept as its root.
+to λ^{-½}, is then τ^{-4/5}: between the flat one (Gelman 2006, Bayesian Anal. 1), whose bands
+covered 97 to 98 % in trials, and 1/τ, whose bands fell below 88 % for weak quadratics (see
+validation/coverage.py). What that is beyond V is positive semi-definite, of low rank, and kept as
+its root.
 """
 
 from __future__ import annotations
@@ -22,7 +23,7 @@ from addmodel.solve.quadratic import Solution
 from addmodel.solve.smoothness import ridges_for
 from addmodel.spaces.base import FloatArray
 
-POWER = 0.25
+POWER = 0.1
 GRID = 16
 LEAST_DF, MOST_DF = 0.02, 8.0
 """The grid runs over smoothing parameters that leave a block alone so many degrees of freedom."""
