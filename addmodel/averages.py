@@ -68,8 +68,8 @@ def average(
     if not isinstance(settings, Mapping) or not settings:
         raise ModelError("settings= is a mapping such as {'arm': ['a', 'b']}.")
     source = open_source(over)
-    frame, _ = source.load(list(source.names))
-    base = pd.DataFrame(dict(frame))
+    columns, _ = source.load([str(name) for name in source.names])
+    base = pd.DataFrame(dict(columns))
     mass = np.ones(len(base)) if weights is None else np.asarray(weights, dtype=np.float64)
     if mass.shape != (len(base),) or not (mass >= 0).all() or not mass.sum() > 0:
         raise ModelError(f"weights= are {len(base)} numbers of at least 0, one for each row.")

@@ -30,6 +30,7 @@ from addmodel.inference import (
 )
 from addmodel.outcomes import outcome_for
 from addmodel.prediction import components_named, model_columns, predict
+from addmodel.relativities import relativities
 from addmodel.sentences import sentence
 from addmodel.significance import Questions
 from addmodel.solve.criteria import CRITERIA
@@ -533,6 +534,16 @@ class Fit:
             A row a setting: average, difference and ratio, each with lower and upper.
         """
         return average(self._sure, settings, over, weights=weights, level=level, seed=seed, per=per)
+
+    def relativities(self, folder: str | Path) -> list[Path]:
+        """Write a log-link model as tables of factors: one CSV a component, and the base.
+
+        Columns: the covariate, relativity (against the base level, or the median), lower, upper,
+        exposure, and actual over expected (of a number: of the tenth of the data that it lies in).
+        The base times one relativity of each table is the prediction for one unit of exposure;
+        between a number's 401 points interpolate their logarithms.
+        """
+        return relativities(self._sure, folder)
 
     def leave_one_out(self) -> FloatArray:
         """Each row's deviance when it is left out, from leverages, λ held, shape (n,).

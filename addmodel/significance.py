@@ -27,12 +27,13 @@ from addmodel.matrix import IntArray
 from addmodel.solve.criteria import CRITERIA
 from addmodel.solve.quadratic import Solution, factored
 from addmodel.solve.restricted_ratio import Contrasts, p_value
-from addmodel.solve.smoothness import settled_from
+from addmodel.solve.smoothness import ridges_for, settled_from
 from addmodel.spaces.base import FloatArray
 from addmodel.straight import beyond
 
 PRECISELY = 1e-7
 """Largest gradient of the null fit, as a part of the cost."""
+SUPPLE = 8.0
 MOST_LEVELS = 1_500
 """Beyond so many coefficients of groups the null law is that of many groups, ½χ²₀ + ½χ²₁."""
 
@@ -90,7 +91,8 @@ class Questions:
         """How much of a component the others could do, 0 to 1.
 
         The part of f_j's weighted sum of squares that the other components take away when they are
-        fitted to it, as smooth as they came out; NaN where f_j is nothing.
+        fitted to it, each at least as free as SUPPLE degrees of freedom make it (one that came out
+        flat could have done it all the same; groups as they came out); NaN where f_j is nothing.
         """
         design, estimate, modes = self.estimate.design, self.estimate, self.laid.modes
         place = design.unpenalised_places[component]
@@ -101,6 +103,11 @@ class Questions:
         rows = modes.rows
         part = rows.linear_predictor(alone) - rows.linear_predictor(np.zeros_like(alone))
         smoothing = estimate.smoothing.copy()
+        problem = modes.quadratic(estimate.coefficients, fisher=True)
+        for k, block in enumerate(design.blocks):
+            if not block.grouped and not problem.spanned[k]:
+                supple = float(ridges_for(problem, k, [min(SUPPLE, 0.5 * block.size)])[0])
+                smoothing[k] = min(smoothing[k], supple)
         smoothing[design.blocks_of(component)] = np.inf
         with one_thread():
             return modes.without(columns).taken_away(part, smoothing)
