@@ -43,8 +43,8 @@ class Effect:
         Its name.
     table : pandas.DataFrame
         The covariates under their own names, then effect, std_error, lower, upper (pointwise),
-        lower_whole, upper_whole (simultaneous): the difference from the average over the data, on
-        the scale of the linear predictor.
+        lower_whole, upper_whole (simultaneous over the rows of the table): the difference from the
+        average over the data, on the scale of the linear predictor.
         Over two numbers also `outside`: no data are near.
     panel : figures.Panel, joints.Surface or joints.Family
         The same as a picture.

@@ -18,6 +18,7 @@ from threadpoolctl import ThreadpoolController
 
 from addmodel import cautions
 from addmodel.assembly import ALL_PAIRS, assemble, resized
+from addmodel.cells import rounded
 from addmodel.component import Block, Component, Seen, cross, gammas_of, most_functions
 from addmodel.data import Table
 from addmodel.design import Design
@@ -97,6 +98,10 @@ class Estimate:
     cautions: tuple[str, ...]
     arguments: dict[str, str]
     """How weights, counts and offset were given, in words: for the summary's recipe."""
+    cells: dict[str, int]
+    """Of many rows, the number of cells that each covariate is rounded to."""
+    rounding: dict[str, float]
+    """The largest rounding of each, as a part of its standard deviation."""
     table: Table | None
     linear_predictor: FloatArray | None  # (n,)
 
@@ -117,6 +122,7 @@ def estimate(
     criterion: Criterion,
     arguments: dict[str, str],
     progress: Progress,
+    exact: bool = False,
 ) -> Estimate:
     """Fit the model.
 
@@ -134,6 +140,8 @@ def estimate(
         How weights, counts and offset were given, in words.
     progress : callable
         Told in words what is going on.
+    exact : bool
+        Whether numbers of many rows are left as they are (see `cells`).
 
     Raises
     ------
@@ -142,9 +150,11 @@ def estimate(
     """
     _check_outcome(table, outcome)
     outcome.check(table)
+    near = rounded(table, exact)
     with one_thread():
-        found = _search(model, table, outcome, criterion, progress)
-        return _estimate(model, table, criterion, arguments, found)
+        found = _search(model, near.table, outcome, criterion, progress)
+        estimated = _estimate(model, near.table, criterion, arguments, found)
+    return replace(estimated, cells=dict(near.cells), rounding=dict(near.largest))
 
 
 @cache
@@ -263,6 +273,8 @@ def _estimate(
             *cautions.of_outcome(design, table, outcome, eta, dispersion),
         ),
         arguments=arguments,
+        cells={},
+        rounding={},
         table=table,
         linear_predictor=eta,
     )

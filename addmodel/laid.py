@@ -8,13 +8,16 @@ from dataclasses import dataclass, replace
 import numpy as np
 import scipy.optimize
 
+from addmodel.cells import MANY_ROWS
 from addmodel.data import Table
 from addmodel.design import Design
 from addmodel.errors import ModelError
 from addmodel.matrix import DesignMatrix, Layout
 from addmodel.outcomes import Outcome
 from addmodel.outcomes.likelihood import Likelihood
+from addmodel.rows.base import Rows
 from addmodel.rows.dense import DenseRows
+from addmodel.rows.tables import Part, TableRows
 from addmodel.solve.criteria import Criterion
 from addmodel.solve.pirls import Modes
 from addmodel.solve.quadratic import IndexArray, Solution
@@ -40,11 +43,8 @@ class Laid:
         cls, design: Design, table: Table, outcome: Outcome, criterion: Criterion, scale: float
     ) -> Laid:
         """The design's columns at the rows of the table; `scale` is φ where it is known."""
-        weights = table.prior
-        values = {key: column.values for key, column in table.columns.items()}
-        matrix = design.matrix(values, len(weights))
-        rows = DenseRows(matrix, table.outcome, weights, table.offset)
-        start = np.zeros(matrix.layout.total)
+        rows = rows_of(design, table)
+        start = np.zeros(design.layout.total)
         start[0] = null_predictor(table, outcome)
         modes = Modes(
             rows=rows,
@@ -94,6 +94,41 @@ class Laid:
     def free_blocks(self) -> IndexArray:
         """The blocks whose smoothing parameter is to be chosen."""
         return np.flatnonzero([b.fixed is None and b.df is None for b in self.design.blocks])
+
+
+def rows_of(design: Design, table: Table) -> Rows:
+    """Dense columns up to MANY_ROWS rows, and where nothing was rounded; tables beyond."""
+    values = {key: column.values for key, column in table.columns.items()}
+    n = len(table.outcome)
+    if n <= MANY_ROWS:
+        return DenseRows(design.matrix(values, n), table.outcome, table.prior, table.offset)
+    coded = {key: np.unique(x, return_inverse=True) for key, x in values.items()}
+    if np.mean([len(distinct) for distinct, _ in coded.values()]) > n / 4:
+        return DenseRows(design.matrix(values, n), table.outcome, table.prior, table.offset)
+    layout = design.layout
+    first = Part(np.ones((1, 1)), np.zeros(n, dtype=np.int64), np.zeros(1, dtype=np.int64))
+    parts = [first]
+    wide = np.empty((n, sum(layout.parts)))
+    codes = np.full(n, -1)
+    for j, component in enumerate(design.components):
+        flat, extent = np.zeros(n, dtype=np.int64), 1
+        for key in component.keys:
+            distinct, where = coded[key]
+            extent *= len(distinct)
+            if extent > 2**62:
+                raise ModelError(f"{component.name} has too many combinations of values.")
+            flat = flat * len(distinct) + where
+        _, one, cells = np.unique(flat, return_index=True, return_inverse=True)
+        at_cells = {key: values[key][one] for key in component.keys}
+        matrix = design.matrix(at_cells, len(one), [j])
+        dense, apart = design.masks([j], intercept=False)
+        places = np.flatnonzero(dense)
+        if len(places):
+            parts.append(Part(matrix.dense[:, places], cells, places))
+        if apart.any():
+            wide[:, apart] = matrix.wide[cells][:, apart]
+            codes = matrix.codes[cells]
+    return TableRows(tuple(parts), wide, codes, layout, table.outcome, table.prior, table.offset)
 
 
 def likelihood_of(table: Table, outcome: Outcome, scale: float) -> Likelihood:

@@ -23,8 +23,10 @@ from addmodel.spaces.place import Place
 CLEAR = 0.05
 STANDS_IN = 0.8
 """Overlap from which one component can stand in for others."""
+MOST_STRETCHES = 5
+LEVEL = 0.12
 STEADY = 0.02
-"""A stretch shorter than this part of the grid is not told."""
+"""A stretch shorter than these parts of the grid is not told: a turning point is not level."""
 
 
 def sentence(estimate: Estimate, component: int) -> str:
@@ -33,6 +35,8 @@ def sentence(estimate: Estimate, component: int) -> str:
     c = design.components[component]
     assert estimate.answers is not None
     none, straight, _ = estimate.answers[component]
+    if np.isnan(none):
+        return f"{c.name}: all of it is in other components."
     if none > CLEAR:
         return f"{c.name}: no effect can be seen ({p_words(none)})."
     course = _course(estimate, component)
@@ -88,7 +92,9 @@ def _course(estimate: Estimate, component: int) -> str:
     if space is None:
         return f"{' and '.join(s.key for s in c.spaces)} act together, not each by itself"
     table: Any = effect(estimate, c.name, at=None, level=0.95).table
-    if isinstance(space, Line):
+    assert estimate.answers is not None
+    straight = estimate.answers[component][1]
+    if isinstance(space, Line) or (isinstance(space, Curve) and straight > CLEAR):
         return _line(table, space.key)
     if isinstance(space, Levels):
         name = table.columns[0]
@@ -125,17 +131,22 @@ def _stretches(table: pd.DataFrame) -> str:
     runs = [
         (direction[a], a, b)
         for a, b in zip(starts, stops, strict=True)
-        if b - a > STEADY * len(direction)
+        if b - a > (LEVEL if direction[a] == "unclear" else STEADY) * len(direction)
     ]
     words = {"rising": "rises", "falling": "falls", "unclear": "level"}
     told: list[str] = []
     for k, (kind, _, stop) in enumerate(runs):
         if told and words[kind] == told[-1].split(" ")[0]:
             continue
-        until = "" if k == len(runs) - 1 else f" to about {_place(table[name].iloc[stop - 1])}"
+        last = k == len(runs) - 1
+        turn = stop if last else (stop + runs[k + 1][1]) // 2  # half-way to the next stretch
+        until = "" if last else f" to about {_place(table[name].iloc[turn])}"
         told.append(words[kind] + until)
     if all(t.startswith("level") for t in told):
         return "an effect whose direction is unclear"
+    if len(told) > MOST_STRETCHES:
+        turns = sum(not t.startswith("level") for t in told)
+        return f"rises and falls, {turns} stretches of it clearly"
     return ", then ".join(told)
 
 

@@ -146,6 +146,8 @@ class Questions:
         return NullFit(found.point, beta, found.point.smoothing, columns, blocks)
 
     def _none(self, columns: IntArray, blocks: tuple[int, ...]) -> float:
+        if not len(columns) and not blocks:
+            return float("nan")  # all of it is in other components
         null = self._null(columns, blocks)
         if not len(columns):
             return self._penalised(null, columns)

@@ -160,9 +160,16 @@ def _how(estimate: Estimate) -> str:
     by = {"reml": "REML", "gcv": "GCV", "ubre": "UBRE"}[estimate.criterion]
     value = f"{by} = {estimate.criterion_value:,.3f}"
     steps = "step" if estimate.steps == 1 else "steps"
+    cells = ""
+    if estimate.cells:
+        most = max(estimate.rounding.values())
+        cells = (
+            f" Numbers were rounded to at most {max(estimate.cells.values()):,} cells, by at most "
+            f"{most:.2g} standard deviations (exact=True leaves them as they are)."
+        )
     return (
         f"{went} in {estimate.steps} {steps}; {rows.used:,} of {rows.read:,} rows used{note}"
-        f"{counted}; smoothness by {by} ({value})."
+        f"{counted}; smoothness by {by} ({value}).{cells}"
     )
 
 

@@ -102,7 +102,15 @@ def test_fit_writes_the_tables_that_python_gives(fitted, here):
         pd.testing.assert_frame_equal(read, getattr(here, name), check_exact=False, rtol=1e-12)
     for name, stem in STEMS.items():
         read = pd.read_csv(out / f"{stem}.csv")
-        assert list(read.columns) == [COVARIATES[name], "effect", "std_error", "lower", "upper"]
+        assert list(read.columns) == [
+            COVARIATES[name],
+            "effect",
+            "std_error",
+            "lower",
+            "upper",
+            "lower_whole",
+            "upper_whole",
+        ]
         expected = here.effect(name).table
         if name == "site":
             assert list(read["site"]) == ["north", "south", "west"]

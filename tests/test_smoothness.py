@@ -77,7 +77,10 @@ def test_reml_with_all_functions(name):
     assert np.abs(fit.estimate.gradient).max() < 1e-6 * abs(value)
     if name in FITTED:
         np.testing.assert_allclose(fit.fitted[:5], FITTED[name], rtol=1e-7)
-        errors = fit.predict(data, interval=0.95)["std_error"]
+        values = {k: c.values for k, c in fit.estimate.table.columns.items()}
+        matrix = fit.estimate.design.matrix(values, len(fit.fitted))
+        # At given smoothing parameters: predict() adds what their uncertainty does.
+        errors = np.sqrt(fit.estimate.posterior.variance(matrix))
         np.testing.assert_allclose(errors[:3], STD_ERROR[name], rtol=1e-6)
 
 

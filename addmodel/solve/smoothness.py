@@ -106,7 +106,7 @@ def choose(
         smoothing = found.point.smoothing.copy()
         for j, target in targets.items():
             given[j] = smoothing[j] = ridge_reaching(problem, smoothing, j, target)
-        if np.nanmax(np.abs(np.log(given / before))) < 1e-9:
+        if max(abs(np.log(given[j]) - np.log(before[j])) for j in targets) < 1e-9:
             break
     return found
 
