@@ -9,14 +9,18 @@ from typing import Any, Literal
 import numpy as np
 import pandas as pd
 
-from addmodel.bands import draws_of
-from addmodel.errors import ModelError
+from addmodel.component import Seen
+from addmodel.errors import DataError, ModelError
 from addmodel.estimate import Estimate
 from addmodel.frames import open_source
+from addmodel.inference import check_level, coefficient_draws
 from addmodel.prediction import mean_at, new_rows, offsets_of
 from addmodel.spaces.base import FloatArray
 
 DRAWS = 2_000
+FEWER = 300
+MANY = 5_000
+"""With more coefficients than this (many groups) fewer draws are taken."""
 
 
 def simulate(
@@ -31,27 +35,36 @@ def simulate(
     """See `Fit.simulate`."""
     if what not in ("mean", "outcome"):
         raise ModelError(f"what={what!r} is not known; it is 'mean' or 'outcome'.")
-    if isinstance(count, bool) or not isinstance(count, int) or count < 1:
-        raise ModelError(f"The number of draws is a whole number of at least 1; got {count!r}.")
-    eta = linear_draws(estimate, new, seed, per, count)
-    rng = np.random.default_rng(seed + 7)
+    draws = coefficient_draws(estimate, count, seed)
+    eta = linear_draws(estimate, new, draws, per)
     mean = np.array([estimate.outcome.mean(row) for row in eta])
     if what == "mean":
         return mean
+    rng = np.random.default_rng(int(seed) + 7)
     return np.array([estimate.outcome.draw(row, estimate.scale, rng) for row in mean])
 
 
 def linear_draws(
-    estimate: Estimate, new: object, seed: int, per: float | None, count: int
+    estimate: Estimate, new: object, draws: FloatArray, per: float | None
 ) -> FloatArray:
-    """Draws of the linear predictor at new rows, offset included, (count, n)."""
+    """The linear predictor at new rows for draws of the coefficients, offset included, (count, n).
+
+    Groups that the fit has not seen are refused: they would need draws of their own.
+    """
     roles, known = offsets_of(estimate, per)
     rows = new_rows(estimate, new, unseen="error", missing="error", roles=roles)
     design = estimate.design
     values = {key: column.values for key, column in rows.columns.items()}
+    seen = Seen(values, rows.n)
+    for owner, block in design.owned_blocks:
+        strange = block.grouped and design.components[owner].unknown_groups(block, seen).any()
+        if strange:
+            raise DataError(
+                f"{design.components[owner].name}: some rows are of groups that the fit has not "
+                "seen. Use predict(), which widens their intervals, or leave them out."
+            )
     matrix = design.matrix(values, rows.n)
-    middle = matrix.times(estimate.coefficients) + rows.offset + known
-    return middle + draws_of(estimate, matrix, seed, count)
+    return np.asarray(matrix.against(draws.T).T + rows.offset + known, dtype=np.float64)
 
 
 def average(
@@ -70,21 +83,35 @@ def average(
     source = open_source(over)
     columns, _ = source.load([str(name) for name in source.names])
     base = pd.DataFrame(dict(columns))
-    mass = np.ones(len(base)) if weights is None else np.asarray(weights, dtype=np.float64)
+    if isinstance(weights, str):
+        if weights not in base.columns:
+            raise ModelError(f"weights= names '{weights}', which the rows do not have.")
+        weights = base[weights].to_numpy()
+    try:
+        mass = np.ones(len(base)) if weights is None else np.asarray(weights, dtype=np.float64)
+    except (TypeError, ValueError) as error:
+        raise ModelError(f"weights= are numbers, one for each row; got {weights!r}.") from error
+    check_level(level)
     if mass.shape != (len(base),) or not (mass >= 0).all() or not mass.sum() > 0:
         raise ModelError(f"weights= are {len(base)} numbers of at least 0, one for each row.")
     listed: dict[str, list[Any]] = {}
     for key, value in settings.items():
-        several: Any = value if isinstance(value, list | tuple | np.ndarray) else [value]
+        several: Any = (
+            value
+            if isinstance(value, list | tuple | np.ndarray | pd.Series | pd.Index)
+            else [value]
+        )
         listed[str(key)] = list(several)
     for key in listed:
         if key not in base.columns:
             raise ModelError(f"settings= names '{key}', which the rows do not have.")
     combinations = list(itertools.product(*listed.values()))
+    many = len(estimate.coefficients) > MANY
+    coefficients = coefficient_draws(estimate, FEWER if many else DRAWS, seed)
     averages = []
     for combination in combinations:
         changed = base.assign(**dict(zip(listed, combination, strict=True)))
-        eta = linear_draws(estimate, changed, seed, per, DRAWS)
+        eta = linear_draws(estimate, changed, coefficients, per)
         drawn = [estimate.outcome.mean(row) @ mass for row in eta]
         centre = mean_at(estimate, changed, per) @ mass
         averages.append(np.array([centre, *drawn]) / mass.sum())

@@ -13,7 +13,7 @@ import numpy as np
 import scipy.stats
 
 from addmodel.estimate import Estimate
-from addmodel.inference import DEFAULT_SEED, freedom, quantile, uncertain
+from addmodel.inference import DEFAULT_SEED, check_seed, freedom, quantile, uncertain
 from addmodel.matrix import DesignMatrix
 from addmodel.spaces.base import FloatArray
 
@@ -63,6 +63,7 @@ def draws_of(
     estimate: Estimate, matrix: DesignMatrix, seed: int, count: int | None = None
 ) -> FloatArray:
     """Draws of columns · (coefficients less the estimated ones), (count, n)."""
+    check_seed(seed)
     rng = np.random.default_rng(seed)
     reduced = estimate.posterior.reduced(matrix)
     used = np.flatnonzero(np.abs(reduced).max(axis=0, initial=0.0) > 0)

@@ -22,16 +22,19 @@ def compare(estimates: dict[str, Estimate]) -> pd.DataFrame:
     for name, estimate in estimates.items():
         if estimate.table is None or first.table is None:
             raise ModelError("Saved fits have no rows: compare fits before they are saved.")
-        same = np.array_equal(estimate.table.rows, first.table.rows) and np.array_equal(
-            estimate.table.outcome, first.table.outcome
+        same = all(
+            np.array_equal(getattr(estimate.table, part), getattr(first.table, part))
+            for part in ("rows", "outcome", "weights", "counts", "trials")
         )
         if not same:
             raise ModelError(
-                f"'{name}' is fitted to other rows or another outcome than the first: fit all to "
-                "the same rows, without missing values in any model's columns."
+                f"'{name}' is fitted to other rows or another outcome or weights than the first: "
+                "fit all to the same rows, without missing values in any model's columns."
             )
         extra = float(not estimate.outcome.scale_known) + float(estimate.outcome.dispersion_free)
-        left_out = leave_one_out(estimate)
+        # Deviances of two distributions are not of one scale.
+        like = estimate.outcome.kind == first.outcome.kind
+        left_out = leave_one_out(estimate) if like else np.full(2, np.nan)
         rows.append(
             {
                 "effective_df": float(estimate.column_df.sum()),
@@ -63,8 +66,10 @@ def leave_one_out(estimate: Estimate) -> FloatArray:
         leverage = laid.modes.rows.variances(estimate.posterior) / estimate.scale
     eta = estimate.linear_predictor
     curvature = outcome.curvature(table.outcome, eta, table.prior)
-    room = np.maximum(1 - leverage * curvature.observed, 1e-6)
-    without = eta - leverage * curvature.slope / room
+    # A row that stands for several loses one of them.
+    weight, slope = curvature.observed / table.counts, curvature.slope / table.counts
+    room = np.maximum(1 - leverage * weight, 1e-6)
+    without = eta - leverage * slope / room
     return np.asarray(
         table.prior * outcome.deviances(table.outcome, outcome.mean(without)), dtype=np.float64
     )

@@ -4,6 +4,7 @@ from __future__ import annotations
 
 from collections.abc import Mapping, Sequence
 from dataclasses import dataclass, replace
+from numbers import Real
 from typing import Any
 
 import numpy as np
@@ -16,13 +17,15 @@ from addmodel.errors import ModelError
 from addmodel.estimate import Estimate
 from addmodel.formula import find_sum
 from addmodel.grids import Axis, axes, product, shown, values_given
-from addmodel.inference import DEFAULT_SEED, quantile, uncertain
+from addmodel.inference import DEFAULT_SEED, check_level, quantile, uncertain
 from addmodel.matrix import DesignMatrix
 from addmodel.spaces.base import FloatArray, Values
 from addmodel.spaces.cycle import Cycle
 
 STEP = 1e-4
 """Of the covariate's range: the step of a difference quotient."""
+EXTREMES = ("minimum", "maximum")
+PERIODS = {"day": 1.0, "week": 7.0, "month": 30.4375, "year": 365.25}
 RATIOS = {"Log": "ratio of means", "Logit": "odds ratio"}
 COUNTS = ("Poisson", "NegativeBinomial")
 
@@ -69,10 +72,17 @@ def contrast(
     seed: int,
 ) -> Contrast:
     """See `Fit.contrast`."""
+    check_level(level)
+    if scale not in ("outcome", "link"):
+        raise ModelError(f"scale={scale!r} is not known; it is 'outcome' or 'link'.")
+    if by is not None and (per is not None or reference in EXTREMES):
+        raise ModelError("by= goes with a reference value; hold one level by at= instead.")
     chosen = chosen_of(estimate, name)
     found = axes(estimate, chosen, at)
     if at is None and per is None:
         found = _with_reference(estimate, found, reference)
+    if at is None and per is not None:
+        found = _beyond_the_start(found, positive(per), name)
     values, n = product(found)
     if per is not None:
         axis = _number(found, name)
@@ -82,7 +92,7 @@ def contrast(
             _moved(estimate, chosen, values, n, axis.keys[0], -size)
         )
         both = band(estimate, matrix, level, seed)
-    elif reference in ("minimum", "maximum"):
+    elif isinstance(reference, str) and reference in EXTREMES:
         axis = _number(found, name)
         matrix, both, words = _against_extreme(estimate, chosen, found, str(reference), level, seed)
     else:
@@ -104,7 +114,8 @@ def _with_reference(
 ) -> tuple[Axis, ...]:
     """The reference among the places shown: there the band has no width."""
     running = [axis for axis in found if axis.kind == "number"]
-    if len(running) != 1 or isinstance(reference, Mapping):
+    plain = not isinstance(reference, Mapping) and reference not in EXTREMES
+    if len(running) != 1 or not plain:
         return tuple(found)
     key = running[0].keys[0]
     if reference == "median":
@@ -113,7 +124,10 @@ def _with_reference(
     elif isinstance(reference, str) and estimate.design.columns[key].kind != "date":
         return tuple(found)
     else:
-        place = float(values_given(estimate.design.columns[key], reference)[0])
+        given = values_given(estimate.design.columns[key], reference)
+        if len(given) != 1:
+            raise ModelError(f"reference= is one value of {key}; got {reference!r}.")
+        place = float(given[0])
     if not running[0].values.min() <= place <= running[0].values.max():
         return tuple(found)
     more = np.unique(np.append(running[0].values, place))
@@ -138,9 +152,20 @@ def chosen_of(estimate: Estimate, name: str) -> list[int]:
 
 def positive(value: object) -> float:
     """per= as a number."""
-    if isinstance(value, bool) or not isinstance(value, int | float) or not 0 < value < np.inf:
+    if isinstance(value, bool) or not isinstance(value, Real) or not 0 < float(value) < np.inf:
         raise ModelError(f"per= is a positive number of the covariate's units; got {value!r}.")
     return float(value)
+
+
+def _beyond_the_start(found: Sequence[Axis], size: float, name: str) -> tuple[Axis, ...]:
+    """Places from which `size` less is still within the data."""
+    axis = _number(found, name)
+    if isinstance(axis.space, Cycle):
+        return tuple(found)
+    later = axis.values[axis.values >= axis.values.min() + size]
+    if not len(later):
+        raise ModelError(f"per={size:g} is more than the whole range of {axis.keys[0]}.")
+    return tuple(replace(a, values=later) if a is axis else a for a in found)
 
 
 def _with_levels(own: DesignMatrix, difference: DesignMatrix) -> DesignMatrix:
@@ -155,9 +180,14 @@ def _with_levels(own: DesignMatrix, difference: DesignMatrix) -> DesignMatrix:
 
 def _number(found: Sequence[Axis], name: str) -> Axis:
     running = [axis for axis in found if axis.kind == "number"]
+    held = [axis for axis in found if axis.kind == "cut" and len(axis.values) == 1]
+    if not running and len(held) == 1:
+        return held[0]
+    if not running:
+        raise ModelError(f"{name} has no number to move along.")
     if len(running) != 1:
         raise ModelError(
-            f"{name} has {len(running)} running numbers: hold the others by at=, such as "
+            f"{name} has {len(running)} running numbers: hold all but one by at=, such as "
             "at={'z': 1.0}."
         )
     return running[0]
@@ -178,6 +208,10 @@ def _reference(
     With by= that covariate keeps each row's own value: one contrast for each of its levels.
     """
     design = estimate.design
+    bare = {key.removeprefix("C(").removesuffix(")"): key for a in found for key in a.keys}
+    by = bare.get(by, by) if by is not None else None
+    if isinstance(reference, Mapping):
+        reference = {bare.get(str(key), str(key)): value for key, value in reference.items()}
     kept = {key for axis in found for key in axis.keys if by is not None and by in axis.keys}
     if by is not None and not kept:
         raise ModelError(f"by={by!r} is no covariate of this component.")
@@ -207,7 +241,9 @@ def _reference(
                 quantiles = design.spreads[key].quantiles
                 number = float(quantiles[len(quantiles) // 2])
                 there[key] = np.full(len(values[key]), number)
-                words.append(f"{key} = {number:.4g} (the median)")
+                place = next(iter(shown({key: np.array([number])}, design.columns).values()))[0]
+                told = f"{number:.4g}" if isinstance(place, float) else str(place)[:16]
+                words.append(f"{key} = {told} (the median)")
                 continue
         code = values_given(design.columns[key], value)
         if len(code) != 1:
@@ -230,6 +266,11 @@ def _against_extreme(
     In each posterior draw the extreme is sought anew.
     """
     values, n = product(found)
+    if n != len(_number(found, "The component").values) or n < 2:
+        raise ModelError(
+            f"reference={which!r} is of one curve, over several places: hold the other covariates "
+            "by at=."
+        )
     matrix = estimate.design.of_components(values, n, chosen)
     sign = 1.0 if which == "minimum" else -1.0
     curve = matrix.times(estimate.coefficients)
@@ -246,7 +287,7 @@ def _against_extreme(
     axis = _number(found, "The component")
     key = axis.keys[0]
     places = values[key][(sign * draws).argmin(axis=1)]
-    low, high = np.quantile(places, [0.5 - level / 2, 0.5 + level / 2])
+    low, high = _interval(places, float(values[key][best]), axis, level)
     point = shown({key: np.array([values[key][best], low, high])}, estimate.design.columns)
     first, low_words, high_words = (
         f"{v:.4g}" if isinstance(v, float) else str(v)[:16] for v in next(iter(point.values()))
@@ -255,6 +296,18 @@ def _against_extreme(
     there: dict[str, npt.NDArray[Any]] = {k: np.full(n, v[best]) for k, v in values.items()}
     difference = matrix.minus(estimate.design.of_components(there, n, chosen))
     return difference, Band(value, error, half, np.maximum(whole, half)), words
+
+
+def _interval(places: FloatArray, centre: float, axis: Axis, level: float) -> tuple[float, float]:
+    """Quantiles of places along an axis; of a cycle, counted from its estimated place."""
+    ends = [0.5 - level / 2, 0.5 + level / 2]
+    if not isinstance(axis.space, Cycle):
+        low, high = np.quantile(places, ends)
+        return float(low), float(high)
+    start, turn = float(axis.values.min()), float(np.ptp(axis.values)) or 1.0
+    about = np.mod(places - centre + turn / 2, turn) - turn / 2
+    low, high = centre + np.quantile(about, ends)
+    return float(start + np.mod(low - start, turn)), float(start + np.mod(high - start, turn))
 
 
 def _covariance(estimate: Estimate, matrix: DesignMatrix) -> FloatArray:
@@ -276,7 +329,11 @@ def slope(
     values, n = product(found)
     quantiles = estimate.design.spreads[key].quantiles
     low, high = float(quantiles[0]), float(quantiles[-1])
-    h = STEP * (high - low) * (1 if order == 1 else 30)
+    reach = high - low
+    if isinstance(axis.space, Cycle):
+        period = axis.space.period
+        reach = PERIODS[period] if isinstance(period, str) else float(period)
+    h = STEP * reach * (1 if order == 1 else 30)
     if not isinstance(axis.space, Cycle):
         # Within the data, so that the ends' slopes are the curve's own and not its continuation's.
         inside = np.clip(values[key], low + h, high - h)
@@ -308,10 +365,16 @@ def turning_points(
     estimate: Estimate, name: str, *, at: object, level: float, seed: int
 ) -> pd.DataFrame:
     """See `Fit.turning_points`."""
+    check_level(level)
     chosen = chosen_of(estimate, name)
     found = axes(estimate, chosen, at)
     axis = _number(found, name)
+    sorted_ = replace(axis, values=np.unique(axis.values))
+    found = tuple(sorted_ if a is axis else a for a in found)
+    axis = sorted_
     values, n = product(found)
+    if n < 3:
+        raise ModelError("Turning points need at least three places of the covariate.")
     if n != len(axis.values):
         raise ModelError("Turning points are of one curve: hold the other covariates by at=.")
     matrix = estimate.design.of_components(values, n, chosen)
@@ -323,11 +386,9 @@ def turning_points(
     for kind, sign in (("maximum", 1.0), ("minimum", -1.0)):
         best = (sign * draws).argmax(axis=1)
         inner = np.full(len(best), True) if cyclic else (best > 0) & (best < n - 1)
-        places = x[best[inner]]
-        if not len(places):
-            places = x[[int((sign * curve).argmax())]]
-        low, high = np.quantile(places, [0.5 - level / 2, 0.5 + level / 2])
-        rows.append([kind, x[int((sign * curve).argmax())], low, high, float(inner.mean())])
+        place = float(x[int((sign * curve).argmax())])
+        low, high = _interval(x[best], place, axis, level)
+        rows.append([kind, place, low, high, float(inner.mean())])
     table = pd.DataFrame(rows, columns=["point", "at", "lower", "upper", "inside"])
     for column in ("at", "lower", "upper"):
         converted = shown({axis.keys[0]: table[column].to_numpy()}, estimate.design.columns)

@@ -478,8 +478,8 @@ class Fit:
     ) -> pd.DataFrame:
         """Where a curve is highest and lowest: point, at, lower, upper, inside.
 
-        The interval is over posterior draws whose extreme is inside the data's range; ``inside`` is
-        their share: where it is small, the curve rather has its extreme at an end.
+        The interval is over posterior draws; ``inside`` is the share of them whose extreme is not
+        at an end of the data: where it is small, the curve has no turning point to speak of.
         """
         return turning_points(self._sure, component, at=at, level=level, seed=seed)
 
@@ -586,6 +586,10 @@ class Fit:
         design = self.estimate.design
         if not design.count:
             raise ModelError("The model has no components to draw.")
+        if units is not None and not isinstance(units, Mapping):
+            raise ModelError("units= is a mapping of covariates' names, such as {'temp': '°C'}.")
+        if not 40.0 <= width <= 1000.0:
+            raise ModelError(f"width= is in millimetres, from 40 to 1000; got {width!r}.")
         panels = []
         for j in range(design.count):
             panel = effect_to_draw(self._sure, j, units or {}).panel
@@ -646,5 +650,9 @@ def compare(*fits: Fit, **named: Fit) -> pd.DataFrame:
     ModelError
         If the fits are of different rows or outcomes.
     """
+    if not all(isinstance(fit, Fit) for fit in (*fits, *named.values())):
+        raise ModelError(
+            "compare() takes fits, such as compare(a, b) or compare(small=a, large=b)."
+        )
     every = {f"{k + 1}: {fit.formula}": fit for k, fit in enumerate(fits)} | named
     return comparison.compare({name: fit.estimate for name, fit in every.items()})

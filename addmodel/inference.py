@@ -152,14 +152,29 @@ def normal_words(p: float) -> str:
 
 def posterior_draws(estimate: Estimate, count: int, seed: int) -> FloatArray:
     """Draws of all coefficients as reported, smoothing's uncertainty in them, (count, P)."""
-    if isinstance(count, bool) or not isinstance(count, Integral) or count < 1:
-        raise ModelError(f"The number of draws is a whole number of at least 1; got {count!r}.")
-    if isinstance(seed, bool) or not isinstance(seed, Integral) or seed < 0:
-        raise ModelError(f"A seed is a whole number of at least 0; got {seed!r}.")
-    rng = np.random.default_rng(seed)
-    draws = estimate.coefficients + estimate.posterior.draws(count, rng)
-    spread = uncertain(estimate)
-    draws += rng.standard_normal((count, spread.shape[1])) @ spread.T
+    draws = coefficient_draws(estimate, count, seed)
     p = estimate.design.p
     draws[:, :p] = draws[:, :p] @ estimate.design.reporting().T
-    return np.asarray(draws, dtype=np.float64)
+    return draws
+
+
+def coefficient_draws(estimate: Estimate, count: int, seed: int) -> FloatArray:
+    """The same in the solver's coordinates."""
+    check_count(count)
+    check_seed(seed)
+    rng = np.random.default_rng(int(seed))
+    draws = estimate.coefficients + estimate.posterior.draws(int(count), rng)
+    spread = uncertain(estimate)
+    return np.asarray(draws + rng.standard_normal((int(count), spread.shape[1])) @ spread.T)
+
+
+def check_count(count: object) -> None:
+    """A number of draws."""
+    if isinstance(count, bool) or not isinstance(count, Integral) or count < 1:
+        raise ModelError(f"The number of draws is a whole number of at least 1; got {count!r}.")
+
+
+def check_seed(seed: object) -> None:
+    """A seed."""
+    if isinstance(seed, bool) or not isinstance(seed, Integral) or seed < 0:
+        raise ModelError(f"A seed is a whole number of at least 0; got {seed!r}.")

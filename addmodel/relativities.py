@@ -15,6 +15,7 @@ from addmodel.estimate import Estimate
 from addmodel.files import replacing
 from addmodel.grids import Axis, axes, product, shown
 from addmodel.spaces.base import FloatArray
+from addmodel.spaces.cycle import Cycle
 from addmodel.spaces.levels import Levels
 
 POINTS = 401
@@ -55,7 +56,8 @@ def _table(estimate: Estimate, j: int, axis: Axis) -> tuple[pd.DataFrame, float]
     """A component's table, and the log of its value at the reference."""
     design = estimate.design
     key = axis.keys[0]
-    if axis.kind == "number":
+    cyclic = isinstance(axis.space, Cycle)
+    if axis.kind == "number" and not cyclic:
         low, high = float(axis.values.min()), float(axis.values.max())
         quantiles = design.spreads[key].quantiles
         middle = float(quantiles[len(quantiles) // 2])
@@ -63,7 +65,7 @@ def _table(estimate: Estimate, j: int, axis: Axis) -> tuple[pd.DataFrame, float]
         axis = Axis(axis.keys, axis.space, axis.kind, points)
         place = int(np.searchsorted(points, middle))
     else:
-        place = axis.space.base if isinstance(axis.space, Levels) else 0
+        place = axis.space.base if isinstance(axis.space, Levels) else 0  # a cycle's start
     values, n = product([axis])
     own = design.of_components(values, n, [j])
     there = design.of_components({key: np.full(n, values[key][place])}, n, [j])
@@ -87,8 +89,11 @@ def _experience(estimate: Estimate, key: str, axis: Axis) -> tuple[FloatArray, F
         raise ModelError("A saved fit has no rows: write relativities before it is saved.")
     x, prior = table.columns[key].values, table.prior
     if axis.kind == "number":
+        at = axis.values
+        if isinstance(axis.space, Cycle):
+            x, at = axis.space.scaled(x) % 1.0, axis.space.scaled(at) % 1.0
         edges = np.quantile(x, np.linspace(0, 1, BANDS + 1)[1:-1])
-        rows, cells = np.searchsorted(edges, x), np.searchsorted(edges, axis.values)
+        rows, cells = np.searchsorted(edges, x), np.searchsorted(edges, at)
     else:
         codes = {value: i for i, value in enumerate(axis.values.tolist())}
         rows = np.array([codes[v] for v in x.tolist()])

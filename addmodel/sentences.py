@@ -42,7 +42,9 @@ def sentence(estimate: Estimate, component: int) -> str:
     course = _course(estimate, component)
     more = ""
     if np.isfinite(straight):
-        flat = "a straight line" if isinstance(c.single, Curve) else "its unpenalised part"
+        flat = "its unpenalised part"
+        if isinstance(c.single, Curve):
+            flat = "a straight line" if c.single.order == 2 else "a parabola"
         more = (
             f"; more than {flat}, {p_words(straight)}"
             if straight <= CLEAR
@@ -94,8 +96,11 @@ def _course(estimate: Estimate, component: int) -> str:
     table: Any = effect(estimate, c.name, at=None, level=0.95).table
     assert estimate.answers is not None
     straight = estimate.answers[component][1]
-    if isinstance(space, Line) or (isinstance(space, Curve) and straight > CLEAR):
+    bent = isinstance(space, Curve) and (space.order != 2 or not straight > CLEAR)
+    if isinstance(space, Line) or (isinstance(space, Curve) and not bent):
         return _line(table, space.key)
+    if isinstance(space, Curve) and space.order == 1:
+        return "a course without a slope at every point"
     if isinstance(space, Levels):
         name = table.columns[0]
         high = table.loc[table["effect"].idxmax(), name]
@@ -104,8 +109,9 @@ def _course(estimate: Estimate, component: int) -> str:
     if isinstance(space, Cycle | Place | Globe):
         inside = table[~table["outside"]] if "outside" in table else table
         names = list(table.columns[: len(space.keys)])
+        period = space.period if isinstance(space, Cycle) else None
         at = [
-            ", ".join(_place(inside.loc[i, n]) for n in names)
+            ", ".join(_place(inside.loc[i, n], period) for n in names)
             for i in (inside["effect"].idxmax(), inside["effect"].idxmin())
         ]
         return f"highest near {at[0]}, lowest near {at[1]}"
@@ -116,9 +122,13 @@ def _course(estimate: Estimate, component: int) -> str:
 
 
 def _line(table: pd.DataFrame, key: str) -> str:
-    x = table.iloc[:, 0].to_numpy(dtype=np.float64)
+    column = table.iloc[:, 0]
+    dates = pd.api.types.is_datetime64_any_dtype(column)
+    days = (column - column.iloc[0]) / pd.Timedelta(days=1) if dates else column
+    x = days.to_numpy(dtype=np.float64)
+    unit = f"each day of {key}" if dates else f"each unit of {key}"
     rise = (table["effect"].iloc[-1] - table["effect"].iloc[0]) / (x[-1] - x[0])
-    return f"{'rises' if rise > 0 else 'falls'} by {abs(rise):.3g} for each unit of {key}"
+    return f"{'rises' if rise > 0 else 'falls'} by {abs(rise):.3g} for {unit}"
 
 
 def _stretches(table: pd.DataFrame) -> str:
@@ -150,9 +160,12 @@ def _stretches(table: pd.DataFrame) -> str:
     return ", then ".join(told)
 
 
-def _place(value: object) -> str:
+WITHIN = {"day": "%H:%M", "week": "%A", "month": "day %d", "year": "%d %B"}
+
+
+def _place(value: object, period: object = None) -> str:
     if isinstance(value, float | np.floating):
         return f"{value:.3g}"
     if isinstance(value, pd.Timestamp):
-        return f"{value:%Y-%m-%d}"
+        return value.strftime(WITHIN.get(str(period), "%Y-%m-%d"))
     return str(value)

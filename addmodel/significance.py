@@ -294,4 +294,4 @@ def _stacked(
 
 def _combined(first: float, second: float) -> float:
     """The smaller of two independent p values, for what it is worth."""
-    return 1 - (1 - min(first, second)) ** 2
+    return float(-np.expm1(2 * np.log1p(-min(first, second)))) if min(first, second) < 1 else 1.0

@@ -81,7 +81,8 @@ class Summary:
         for title, table in self._tables():
             rows = [["", *table.columns], ["---"] * (1 + table.shape[1])]
             rows += [[str(i), *map(str, r)] for i, r in zip(table.index, table.values, strict=True)]
-            lines = "\n".join("| " + " | ".join(row) + " |" for row in rows)
+            safe = [[cell.replace("|", "\\|") for cell in row] for row in rows]
+            lines = "\n".join("| " + " | ".join(row) + " |" for row in safe)
             told = _bullets(self.sentences) if title == "Components" else ""
             parts.append(f"## {title}\n\n{lines}{told}")
         if self.cautions:

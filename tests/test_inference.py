@@ -169,7 +169,7 @@ def test_contrast_against_the_lowest_point_knows_that_it_is_uncertain(counts):
         (lambda f: f.contrast("curve(x)", reference={"age": 3}), "does not have"),
         (lambda f: f.contrast("curve(x)", per=-1), "per= is a positive number"),
         (lambda f: f.contrast("curve(x)", by="site"), "no covariate of this component"),
-        (lambda f: f.slope("site"), "0 running numbers"),
+        (lambda f: f.slope("site"), "no number to move along"),
         (lambda f: f.slope("curve(x)", order=3), "order= of a slope is 1 or 2"),
         (lambda f: f.simulate(FRAME, 0), "whole number of at least 1"),
         (lambda f: f.average({"arm": [1, 2]}, FRAME), "which the rows do not have"),
@@ -346,3 +346,46 @@ def test_relativities_multiply_to_the_prediction(tmp_path):
     assert tables["site"]["actual_expected"].mean() == pytest.approx(1, abs=0.05)
     with pytest.raises(am.ModelError, match="log link"):
         am.fit("y ~ x", FRAME).relativities(tmp_path)
+
+
+def test_averages_of_groups_have_the_groups_uncertainty():
+    fit = am.fit("y ~ x + group(g)", FRAME)
+    table = fit.average({"g": [3, 7]}, over=FRAME)
+    draws, columns = fit.draws(2000), fit.columns(FRAME.iloc[:2].assign(g=[3, 7], x=1.0))
+    difference = np.diff(columns.to_numpy() @ draws.T, axis=0)[0]
+    low, high = np.quantile(difference, [0.025, 0.975])
+    width = table["difference_upper"].iloc[1] - table["difference_lower"].iloc[1]
+    assert width == pytest.approx(high - low, rel=0.1)
+    with pytest.raises(am.DataError, match="groups that the fit has not seen"):
+        fit.simulate(FRAME.iloc[:2].assign(g=99))
+
+
+def test_slopes_and_extremes_of_a_cycle_over_many_periods():
+    rng = np.random.default_rng(3)
+    time = pd.Timestamp("2020-01-01") + pd.to_timedelta(rng.uniform(0, 1400, 600), "D")
+    hour = (time - time.normalize()) / pd.Timedelta(hours=1)
+    y = np.sin(2 * np.pi * hour / 24) + 0.2 * rng.standard_normal(600)
+    fit = am.fit("y ~ cycle(t, period='day')", {"t": time, "y": y})
+    table = fit.slope("cycle(t)")
+    assert table["slope"].max() == pytest.approx(2 * np.pi, rel=0.1)
+    at = pd.Timestamp("2020-06-01") + pd.to_timedelta([2.0, 6.0, 11.0, 17.5], "h")
+    step = pd.Timedelta(minutes=5)
+    effects = [fit.effect("cycle(t)", at=at + k * step).table["effect"] for k in (-1, 0, 1)]
+    quotient = (effects[0] - 2 * effects[1] + effects[2]) / (5 / 1440) ** 2
+    bend = fit.slope("cycle(t)", order=2, at=at)["slope"]
+    np.testing.assert_allclose(bend, quotient, atol=0.02 * np.abs(quotient).max())
+    peak = am.fit(
+        "y ~ cycle(h, period=24)",
+        {"h": hour, "y": np.cos(2 * np.pi * hour / 24) + 0.2 * rng.standard_normal(600)},
+    ).turning_points("cycle(h)")
+    at = peak.set_index("point").loc["maximum"]  # at the seam: from before it to after it
+    assert at["lower"] > 20
+    assert at["upper"] < 4
+    assert "highest near 0" in fit.summary().sentences[0]
+
+
+def test_counts_leave_out_one_copy():
+    data = FRAME.iloc[:40]
+    three = am.fit("y ~ x + site", data.assign(k=3), counts="k").leave_one_out()
+    long = am.fit("y ~ x + site", pd.concat([data] * 3)).leave_one_out()
+    assert three.sum() == pytest.approx(long.sum(), rel=1e-9)
