@@ -102,6 +102,10 @@ class Rows(ABC):
         """The same rows without some of the dense columns."""
 
     @abstractmethod
+    def part(self, chosen: IntArray) -> Rows:
+        """Only those rows."""
+
+    @abstractmethod
     def fitted_to(self, part: FloatArray) -> Rows:
         """The same columns and weights with another outcome (n,), and no offset."""
 

@@ -113,6 +113,16 @@ class DenseRows(Rows):
         layout = replace(matrix.layout, dense=kept.shape[1])
         return replace(self, matrix=replace(matrix, dense=kept, layout=layout))
 
+    def part(self, chosen: IntArray) -> DenseRows:
+        matrix = self.matrix
+        fewer = replace(
+            matrix,
+            dense=matrix.dense[chosen],
+            wide=matrix.wide[chosen],
+            codes=matrix.codes[chosen],
+        )
+        return DenseRows(fewer, self.y[chosen], self.weights[chosen], self.offset[chosen])
+
     def fitted_to(self, part: FloatArray) -> DenseRows:
         return replace(self, y=part, offset=np.zeros_like(part))
 

@@ -164,6 +164,17 @@ class TableRows(Rows):
         layout = replace(self.layout, dense=len(kept))
         return replace(self, parts=tuple(parts), layout=layout)
 
+    def part(self, chosen: IntArray) -> TableRows:
+        return replace(
+            self,
+            parts=tuple(replace(p, cells=p.cells[chosen]) for p in self.parts),
+            wide=self.wide[chosen],
+            codes=self.codes[chosen],
+            y=self.y[chosen],
+            weights=self.weights[chosen],
+            offset=self.offset[chosen],
+        )
+
     def fitted_to(self, part: FloatArray) -> TableRows:
         return replace(self, y=part, offset=np.zeros_like(part))
 

@@ -67,6 +67,19 @@ class Modes:
             null=np.delete(self.null, columns),
         )
 
+    def part(self, chosen: IndexArray) -> Modes:
+        """Only those rows."""
+        rows, whole = self.rows.part(chosen), self.likelihood
+        likelihood = replace(
+            whole,
+            y=whole.y[chosen],
+            weights=whole.weights[chosen],
+            counts=whole.counts[chosen],
+            trials=whole.trials[chosen],
+        )
+        log_det = rows.log_det_design(self.p, likelihood.counts)
+        return replace(self, rows=rows, likelihood=likelihood, log_det_design=log_det)
+
     def taken_away(self, part: FloatArray, smoothing: FloatArray) -> float:
         """The part of a vector's (n,) weighted variation that the columns take away at λ."""
         rows, outcome = self.rows.fitted_to(part), outcome_for("gaussian")
