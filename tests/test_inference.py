@@ -77,10 +77,10 @@ def test_a_test_of_a_covariate_takes_all_that_contain_it():
 
 @pytest.mark.parametrize("outcome", ["y", "count", "yes"])
 def test_null_components_are_mostly_let_go(outcome):
-    """A short version of validation/sizes.py: size at 5 % within what 60 samples allow."""
+    """A short version of validation/sizes.py: size at 5 % within what 30 samples allow."""
     kind = {"y": "gaussian", "count": "poisson", "yes": "binomial"}[outcome]
     found = []
-    for seed in range(60):
+    for seed in range(30):
         rng = np.random.default_rng(seed)
         x, z = rng.uniform(size=(2, 150))
         eta = np.sin(2 * np.pi * z)
@@ -92,8 +92,8 @@ def test_null_components_are_mostly_let_go(outcome):
         fit = am.fit("y ~ curve(x) + curve(z)", {"x": x, "z": z, "y": y}, outcome=kind)
         found.append(Questions(fit.estimate).of([0]))
     p = np.array(found)
-    assert ((p < 0.05).sum(axis=0) <= 9).all()  # 3 expected; more than 9 in 0.1 % of such studies
-    assert ((p < 0.5).mean(axis=0) < 0.75).all()
+    assert ((p < 0.05).sum(axis=0) <= 6).all()  # 1.5 expected; more than 6 in 0.1 % of such studies
+    assert ((p < 0.5).mean(axis=0) < 0.8).all()
 
 
 @pytest.mark.filterwarnings("ignore::addmodel.Caution")
