@@ -63,7 +63,7 @@ def resized(design: Design, sizes: Sequence[int], model: Model, table: Table) ->
 
 def _assembled(model: Model, table: Table, sizes: Mapping[tuple[int, int], int] | None) -> Design:
     weights = table.prior
-    values = {key: column.values for key, column in table.columns.items()}
+    values = table.values
     natures = {f.name: nature(f, table) for term in model.terms for f in term.factors}
     spaces = _Spaces(model, table, weights, natures)
     apart = _group_apart(model, spaces)

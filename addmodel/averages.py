@@ -14,7 +14,7 @@ from addmodel.errors import DataError, ModelError
 from addmodel.estimate import Estimate
 from addmodel.frames import open_source
 from addmodel.inference import check_level, coefficient_draws
-from addmodel.prediction import mean_at, new_rows, offsets_of
+from addmodel.prediction import new_rows, offsets_of
 from addmodel.spaces.base import FloatArray
 
 DRAWS = 2_000
@@ -54,7 +54,7 @@ def linear_draws(
     roles, known = offsets_of(estimate, per)
     rows = new_rows(estimate, new, unseen="error", missing="error", roles=roles)
     design = estimate.design
-    values = {key: column.values for key, column in rows.columns.items()}
+    values = rows.values
     seen = Seen(values, rows.n)
     for owner, block in design.owned_blocks:
         strange = block.grouped and design.components[owner].unknown_groups(block, seen).any()
@@ -107,14 +107,14 @@ def average(
             raise ModelError(f"settings= names '{key}', which the rows do not have.")
     combinations = list(itertools.product(*listed.values()))
     many = len(estimate.coefficients) > MANY
-    coefficients = coefficient_draws(estimate, FEWER if many else DRAWS, seed)
+    drawn_ones = coefficient_draws(estimate, FEWER if many else DRAWS, seed)
+    coefficients = np.vstack([estimate.coefficients, drawn_ones])  # the estimate itself comes first
     averages = []
     for combination in combinations:
         changed = base.assign(**dict(zip(listed, combination, strict=True)))
         eta = linear_draws(estimate, changed, coefficients, per)
         drawn = [estimate.outcome.mean(row) @ mass for row in eta]
-        centre = mean_at(estimate, changed, per) @ mass
-        averages.append(np.array([centre, *drawn]) / mass.sum())
+        averages.append(np.array(drawn) / mass.sum())
     rows = []
     for i, (combination, draws) in enumerate(zip(combinations, averages, strict=True)):
         row: dict[str, object] = dict(zip(listed, combination, strict=True))

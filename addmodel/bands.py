@@ -10,11 +10,11 @@ from __future__ import annotations
 from dataclasses import dataclass
 
 import numpy as np
-import scipy.stats
 
 from addmodel.estimate import Estimate
-from addmodel.inference import DEFAULT_SEED, check_seed, freedom, quantile, uncertain
+from addmodel.inference import DEFAULT_SEED, check_seed, freedom, linear, quantile, uncertain
 from addmodel.matrix import DesignMatrix
+from addmodel.posterior import root_of
 from addmodel.spaces.base import FloatArray
 
 DRAWS = 4_000
@@ -35,10 +35,7 @@ class Band:
 
 def band(estimate: Estimate, matrix: DesignMatrix, level: float, seed: int = DEFAULT_SEED) -> Band:
     """Both bands of columns · coefficients."""
-    value = matrix.times(estimate.coefficients)
-    variance = estimate.posterior.variance(matrix)
-    spread = matrix.against(uncertain(estimate))
-    error = np.sqrt(np.maximum(variance + (spread**2).sum(axis=1), 0.0))
+    value, error = linear(estimate, matrix)
     half = quantile(estimate, level) * error
     whole = critical(estimate, matrix, error, level, seed) * error
     return Band(value, error, half, np.maximum(whole, half))
@@ -59,17 +56,15 @@ def critical(
     return float(np.quantile(largest, level))
 
 
-def draws_of(
-    estimate: Estimate, matrix: DesignMatrix, seed: int, count: int | None = None
-) -> FloatArray:
-    """Draws of columns · (coefficients less the estimated ones), (count, n)."""
+def draws_of(estimate: Estimate, matrix: DesignMatrix, seed: int) -> FloatArray:
+    """Draws of columns · (coefficients less the estimated ones), (draws, n)."""
     check_seed(seed)
     rng = np.random.default_rng(seed)
     reduced = estimate.posterior.reduced(matrix)
     used = np.flatnonzero(np.abs(reduced).max(axis=0, initial=0.0) > 0)
     grouped = bool(matrix.layout.parts) and bool(matrix.wide.any())
-    count = count or (FEWER if grouped else DRAWS)
-    root = reduced[:, used] @ _root(estimate.posterior.dense[np.ix_(used, used)])
+    count = FEWER if grouped else DRAWS
+    root = reduced[:, used] @ root_of(estimate.posterior.dense[np.ix_(used, used)])
     root = np.concatenate([root, matrix.against(uncertain(estimate))], axis=1)
     draws = rng.standard_normal((count, root.shape[1])) @ root.T
     if grouped:
@@ -84,19 +79,3 @@ def draws_of(
             noise = rng.standard_normal((min(CHUNK, count - start), len(levels), turned.shape[1]))
             draws[start : start + len(noise)] += np.einsum("ic,dic->di", turned, noise[:, where])
     return np.asarray(draws, dtype=np.float64)
-
-
-def _root(covariance: FloatArray) -> FloatArray:
-    """B with BB' a covariance (k, k) whose scales may differ by many orders."""
-    spread = np.sqrt(np.maximum(np.diag(covariance), 0.0))
-    unit = np.where(spread > 0, spread, 1.0)
-    values, vectors = np.linalg.eigh(covariance / np.outer(unit, unit))
-    root: FloatArray = unit[:, None] * vectors * np.sqrt(np.maximum(values, 0.0))
-    return root
-
-
-def normal_p(estimate: Estimate, ratio: FloatArray) -> FloatArray:
-    """Two-sided p of estimate / standard error."""
-    left = freedom(estimate)
-    null = scipy.stats.t(left) if np.isfinite(left) else scipy.stats.norm()
-    return np.asarray(2 * null.sf(np.abs(ratio)), dtype=np.float64)

@@ -140,7 +140,7 @@ def _of_cycle(design: Design, space: Cycle) -> Iterator[str]:
 
 def _small_groups(design: Design, table: Table) -> Iterator[str]:
     """Groups of few yes/no rows: Laplace's approximation takes their variance for too small."""
-    values = {key: column.values for key, column in table.columns.items()}
+    values = table.values
     groups = {s.key: s for c in design.components for s in c.spaces if isinstance(s, Group)}
     for space in groups.values():
         rows = np.bincount(space.codes(space.seen(values)), table.counts, minlength=space.size)
@@ -158,7 +158,7 @@ def _inverse(outcome: Outcome) -> bool:
 
 def _empty_levels(design: Design, table: Table, outcome: Outcome) -> Iterator[str]:
     """Levels without any event (or, yes/no, without any non-event): their coefficient runs off."""
-    values = {key: column.values for key, column in table.columns.items()}
+    values = table.values
     for component in design.components:
         space = component.single
         if not isinstance(space, Levels):

@@ -75,6 +75,11 @@ def column_key(factor: Factor, expression: Expression) -> str:
     return f"C({expression.text})" if factor.kind in LEVELLED else expression.text
 
 
+def bare_name(key: str) -> str:
+    """The expression under a key: x for C(x)."""
+    return key.removeprefix("C(").removesuffix(")") if key.startswith("C(") else key
+
+
 def covariates(model: Model) -> Iterator[tuple[str, Factor, Expression]]:
     """Every use of a covariate, in the order of the formula: column key, factor, expression."""
     for term in model.terms:

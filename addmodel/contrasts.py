@@ -12,6 +12,7 @@ import numpy.typing as npt
 import pandas as pd
 
 from addmodel.bands import Band, band, draws_of
+from addmodel.columns import bare_name
 from addmodel.effects import banded
 from addmodel.errors import ModelError
 from addmodel.estimate import Estimate
@@ -208,7 +209,7 @@ def _reference(
     With by= that covariate keeps each row's own value: one contrast for each of its levels.
     """
     design = estimate.design
-    bare = {key.removeprefix("C(").removesuffix(")"): key for a in found for key in a.keys}
+    bare = {bare_name(key): key for a in found for key in a.keys}
     by = bare.get(by, by) if by is not None else None
     if isinstance(reference, Mapping):
         reference = {bare.get(str(key), str(key)): value for key, value in reference.items()}

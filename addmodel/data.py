@@ -9,9 +9,10 @@ from __future__ import annotations
 from collections.abc import Mapping
 from dataclasses import dataclass
 from types import MappingProxyType
-from typing import NoReturn
+from typing import Any, NoReturn
 
 import numpy as np
+import numpy.typing as npt
 
 from addmodel.columns import (
     Column,
@@ -78,6 +79,11 @@ class Table:
     event: str | None
 
     @property
+    def values(self) -> dict[str, npt.NDArray[Any]]:
+        """The covariates' values by key, each (n,)."""
+        return {key: column.values for key, column in self.columns.items()}
+
+    @property
     def prior(self) -> FloatArray:
         """Prior weight times count times trials, (n,)."""
         weights: FloatArray = self.weights * self.counts * self.trials
@@ -111,6 +117,11 @@ class NewRows:
     unseen: Mapping[str, tuple[Unseen, ...]]
     missing: BoolArray
     offset: FloatArray
+
+    @property
+    def values(self) -> dict[str, npt.NDArray[Any]]:
+        """The covariates' values by key, each (n,)."""
+        return {key: column.values for key, column in self.columns.items()}
 
 
 def read(

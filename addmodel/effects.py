@@ -18,7 +18,7 @@ from addmodel.formula import find_sum
 from addmodel.grids import Axis, along, axes, near_data, plain_name, product, shown, within
 from addmodel.inference import linear, quantile
 from addmodel.matrix import DesignMatrix
-from addmodel.spaces.base import FloatArray, Values
+from addmodel.spaces.base import FloatArray
 from addmodel.spaces.cycle import Cycle
 from addmodel.spaces.group import Group
 from addmodel.spaces.levels import Levels
@@ -84,7 +84,7 @@ def effect(
     if len(running) > 1:
         table["outside"] = ~near_data(estimate, found, values)
     whole = known[chosen[0]] if len(chosen) == 1 else name
-    picture = _with_units(_picture(estimate, found, table, matrix, level, values), units)
+    picture = _with_units(_picture(estimate, found, table, matrix, level), units)
     if not isinstance(picture, figures.Panel):
         picture = replace(picture, caption=_caption(estimate, whole, found, picture))
     return Effect(whole, table, picture)
@@ -114,7 +114,7 @@ def partial_residuals(estimate: Estimate, component: int) -> FloatArray:
     table, eta = estimate.table, estimate.linear_predictor
     if len(c.keys) != 1 or isinstance(c.single, Levels | Group) or table is None or eta is None:
         return np.empty((0, 2))
-    values = {key: column.values for key, column in table.columns.items()}
+    values = table.values
     part = estimate.design.of_components(values, len(eta), [component])
     curvature = estimate.outcome.curvature(table.outcome, eta, table.prior)
     residual = curvature.slope / np.maximum(curvature.fisher, 1e-300)
@@ -179,7 +179,6 @@ def _picture(
     table: pd.DataFrame,
     matrix: DesignMatrix,
     level: float,
-    values: Values,
 ) -> figures.AnyPanel:
     """A panel for one covariate, a family for curves by level, a surface over two numbers."""
     running = [axis for axis in found if not axis.discrete]
@@ -190,7 +189,7 @@ def _picture(
         return _family(estimate, running[0], apart, table, matrix, level)
     if len(running) == 1:
         return _curve(estimate, running[0], table, level)
-    return _levels(estimate, found, table, level, values)
+    return _levels(estimate, found, table, level)
 
 
 def _curve(estimate: Estimate, axis: Axis, table: pd.DataFrame, level: float) -> figures.Panel:
@@ -217,7 +216,7 @@ def _curve(estimate: Estimate, axis: Axis, table: pd.DataFrame, level: float) ->
 
 
 def _levels(
-    estimate: Estimate, found: Sequence[Axis], table: pd.DataFrame, level: float, values: Values
+    estimate: Estimate, found: Sequence[Axis], table: pd.DataFrame, level: float
 ) -> figures.Panel:
     """Levels in their order; groups from the lowest effect to the highest."""
     design = estimate.design

@@ -295,7 +295,7 @@ def _sizes(
     scale: float,
 ) -> tuple[list[int], list[bool]]:
     """The functions each block should have, and for each component whether its detail is enough."""
-    values = {key: column.values for key, column in table.columns.items()}
+    values = table.values
     sizes = []
     confirmed = [True] * design.count
     for k, (owner, block) in enumerate(design.owned_blocks):
@@ -377,7 +377,7 @@ def _check_outcome(table: Table, outcome: Outcome) -> None:
 
 def _check_groups(design: Design, table: Table, outcome: Outcome) -> None:
     """Groups of one row each cannot be told from the noise, unless its size is known."""
-    values = {key: column.values for key, column in table.columns.items()}
+    values = table.values
     for owner, block in design.owned_blocks:
         if not block.grouped or outcome.scale_known or len(block.views) > 1:
             continue

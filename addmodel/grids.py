@@ -11,7 +11,7 @@ import numpy as np
 import numpy.typing as npt
 import pandas as pd
 
-from addmodel.columns import Column, level_label
+from addmodel.columns import Column, bare_name, level_label
 from addmodel.errors import ModelError, nearest
 from addmodel.estimate import Estimate
 from addmodel.spaces.base import FloatArray, Space, Values
@@ -135,11 +135,11 @@ def plain_name(key: str, columns: Mapping[str, Column]) -> str:
 def _at(at: object, spaces: Mapping[tuple[str, ...], Space]) -> dict[tuple[str, ...], object]:
     if at is None:
         return {}
-    known = [key.removeprefix("C(").removesuffix(")") for keys in spaces for key in keys]
+    known = [bare_name(key) for keys in spaces for key in keys]
     if isinstance(at, Mapping):
         found: dict[tuple[str, ...], object] = {}
         for key, values in at.items():
-            bare = {keys: [k.removeprefix("C(").removesuffix(")") for k in keys] for keys in spaces}
+            bare = {keys: [bare_name(k) for k in keys] for keys in spaces}
             fits = [k for k in spaces if key in (", ".join(k), *k, ", ".join(bare[k]), *bare[k])]
             if not fits:
                 raise ModelError(f"at= names '{key}'. {nearest(str(key), known)}")
@@ -197,7 +197,7 @@ def _calendar(first: float, period: str, count: int) -> FloatArray:
 def _given(estimate: Estimate, keys: tuple[str, ...], space: Space, at: object) -> npt.NDArray[Any]:
     """Values that the caller asks for, as the space takes them."""
     if isinstance(space, Group):
-        name = ", ".join(key.removeprefix("C(").removesuffix(")") for key in keys)
+        name = ", ".join(bare_name(key) for key in keys)
         wanted = [at] if isinstance(at, str) or not isinstance(at, Iterable) else list(at)
         labels = [
             ", ".join(map(level_label, w)) if isinstance(w, tuple) else level_label(w)

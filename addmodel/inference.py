@@ -145,9 +145,11 @@ def components_table(estimate: Estimate) -> pd.DataFrame:
     return pd.DataFrame(rows, index=names, columns=COMPONENT_COLUMNS, dtype=np.float64)
 
 
-def normal_words(p: float) -> str:
-    """ "= 0.012" or "< 0.001"."""
-    return "< 0.001" if p < 0.001 else f"= {p:.3f}"
+def p_text(p: float) -> str:
+    """A p value as it is printed; nothing where there is none."""
+    if np.isnan(p):
+        return ""
+    return "< 0.001" if p < 0.001 else f"{p:.3f}"
 
 
 def posterior_draws(estimate: Estimate, count: int, seed: int) -> FloatArray:

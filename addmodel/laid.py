@@ -98,13 +98,13 @@ class Laid:
 
 def rows_of(design: Design, table: Table) -> Rows:
     """Dense columns up to MANY_ROWS rows, and where nothing was rounded; tables beyond."""
-    values = {key: column.values for key, column in table.columns.items()}
+    values = table.values
     n = len(table.outcome)
     if n <= MANY_ROWS:
-        return DenseRows(design.matrix(values, n), table.outcome, table.prior, table.offset)
+        return DenseRows(table.outcome, table.prior, table.offset, design.matrix(values, n))
     coded = {key: np.unique(x, return_inverse=True) for key, x in values.items()}
     if np.mean([len(distinct) for distinct, _ in coded.values()]) > n / 4:
-        return DenseRows(design.matrix(values, n), table.outcome, table.prior, table.offset)
+        return DenseRows(table.outcome, table.prior, table.offset, design.matrix(values, n))
     layout = design.layout
     first = Part(np.ones((1, 1)), np.zeros(n, dtype=np.int64), np.zeros(1, dtype=np.int64))
     parts = [first]
@@ -128,7 +128,7 @@ def rows_of(design: Design, table: Table) -> Rows:
         if apart.any():
             wide[:, apart] = matrix.wide[cells][:, apart]
             codes = matrix.codes[cells]
-    return TableRows(tuple(parts), wide, codes, layout, table.outcome, table.prior, table.offset)
+    return TableRows(table.outcome, table.prior, table.offset, tuple(parts), wide, codes, layout)
 
 
 def likelihood_of(table: Table, outcome: Outcome, scale: float) -> Likelihood:
@@ -142,7 +142,7 @@ def null_predictor(table: Table, outcome: Outcome) -> float:
     weights = table.prior
     n = len(weights)
     column = DesignMatrix(np.ones((n, 1)), np.empty((n, 0)), np.full(n, -1), Layout(1, 0, ()))
-    one = DenseRows(column, table.outcome, weights, table.offset)
+    one = DenseRows(table.outcome, weights, table.offset, column)
     mean = float(np.average(table.outcome, weights=weights))
     typical = outcome.family.starting_mu(np.array([mean, mean]))[:1]
     beta = np.asarray(outcome.family.link(typical), dtype=np.float64) - np.average(table.offset)

@@ -121,13 +121,18 @@ class Posterior:
         return draws
 
 
+def root_of(covariance: FloatArray) -> FloatArray:
+    """B with BB' a covariance (k, k), whose scales may differ by many orders of magnitude."""
+    spread = np.sqrt(np.maximum(np.diag(covariance), 0.0))
+    unit = np.where(spread > 0, spread, 1.0)
+    values, vectors = scipy.linalg.eigh(covariance / np.outer(unit, unit))
+    root: FloatArray = unit[:, None] * vectors * np.sqrt(np.maximum(values, 0.0))
+    return root
+
+
 def _normal(covariance: FloatArray, count: int, rng: np.random.Generator) -> FloatArray:
     used = np.diag(covariance) > 0
-    inner = covariance[np.ix_(used, used)]
-    # Scaled to a correlation: the columns of a block differ by many orders of magnitude.
-    spread = np.sqrt(np.diag(inner))
-    values, vectors = scipy.linalg.eigh(inner / np.outer(spread, spread))
-    root = spread[:, None] * vectors * np.sqrt(np.maximum(values, 0.0))
     draws = np.zeros((count, len(covariance)))
+    root = root_of(covariance[np.ix_(used, used)])
     draws[:, used] = rng.standard_normal((count, int(used.sum()))) @ root.T
     return draws

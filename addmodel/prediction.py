@@ -55,7 +55,7 @@ def predict(
     design = estimate.design
     keys = {key for j in chosen for key in design.components[j].keys}
     rows = new_rows(estimate, new, unseen=unseen, missing=missing, roles=roles, keys=keys)
-    values = {key: column.values for key, column in rows.columns.items()}
+    values = rows.values
     seen = Seen(_filled(values), rows.n)
     matrix = design.matrix(seen.values, rows.n, chosen)
     dense, wide = design.masks(chosen, intercept=only is None)
@@ -126,24 +126,6 @@ def predict(
         },
         index=rows.index,
     )
-
-
-def mean_at(estimate: Estimate, new: object, per: float | None) -> FloatArray:
-    """The predicted mean at new rows, (n,)."""
-    found = predict(
-        estimate,
-        new,
-        scale="outcome",
-        interval=None,
-        new_observation=False,
-        only=None,
-        without=None,
-        per=per,
-        unseen="error",
-        groups="own",
-        missing="error",
-    )
-    return np.asarray(found, dtype=np.float64)
 
 
 def observation_interval(
@@ -259,7 +241,7 @@ def model_columns(estimate: Estimate, new: object) -> pd.DataFrame:
     """The model's columns at new rows, as written: columns · coefficients = linear predictor."""
     rows = new_rows(estimate, new, unseen="error", missing="error")
     design = estimate.design
-    values = {key: column.values for key, column in rows.columns.items()}
+    values = rows.values
     matrix = design.matrix(values, rows.n)
     if design.levels_apart and (matrix.codes < 0).any():
         raise DataError(

@@ -11,7 +11,7 @@ from addmodel.contrasts import slope
 from addmodel.effects import effect
 from addmodel.errors import ModelError
 from addmodel.estimate import Estimate
-from addmodel.inference import normal_words
+from addmodel.inference import p_text
 from addmodel.spaces.curve import Curve
 from addmodel.spaces.cycle import Cycle
 from addmodel.spaces.globe import Globe
@@ -80,7 +80,8 @@ def overlap_cautions(estimate: Estimate) -> list[str]:
 
 def p_words(p: float) -> str:
     """A p value as it is printed."""
-    return f"p {normal_words(p)}"
+    text = p_text(p)
+    return f"p {text}" if text.startswith("<") else f"p = {text}"
 
 
 def _course(estimate: Estimate, component: int) -> str:

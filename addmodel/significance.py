@@ -83,7 +83,7 @@ class Questions:
         with one_thread():
             straight = np.nan
             if blocks and len(columns):
-                straight = self._penalised(self._null(columns[:0], blocks), columns[:0])
+                straight = self._penalised(self._null(columns[:0], blocks))
             none = self._none(columns, blocks)
         return Answer(none, straight)
 
@@ -150,7 +150,7 @@ class Questions:
             return float("nan")  # all of it is in other components
         null = self._null(columns, blocks)
         if not len(columns):
-            return self._penalised(null, columns)
+            return self._penalised(null)
         parts = self._parts(null)
         k = len(columns)
         first, cross = parts.information[:k, :k], parts.information[:k, k:]
@@ -173,7 +173,7 @@ class Questions:
         )
         return _combined(p_first, p_value(second))
 
-    def _penalised(self, null: NullFit, columns: IntArray) -> float:
+    def _penalised(self, null: NullFit) -> float:
         parts = self._parts(null)
         if parts.many:
             return self._many(null)

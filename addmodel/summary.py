@@ -11,9 +11,10 @@ from pathlib import Path
 import numpy as np
 import pandas as pd
 
+from addmodel.columns import bare_name
 from addmodel.estimate import Estimate
 from addmodel.files import replacing
-from addmodel.inference import coefficients_table, components_table
+from addmodel.inference import coefficients_table, components_table, p_text
 from addmodel.sentences import overlap_cautions, sentence
 from addmodel.spaces.base import Space
 from addmodel.spaces.cycle import Cycle
@@ -287,7 +288,7 @@ def space_words(estimate: Estimate, space: Space) -> str:
         days = " days" if estimate.design.columns[space.key].kind == "date" else ""
         return f"a cycle of {space.key} (period {length}{days if length[0].isdigit() else ''})"
     if isinstance(space, Group):
-        bare = ", ".join(key.removeprefix("C(").removesuffix(")") for key in space.keys)
+        bare = ", ".join(bare_name(key) for key in space.keys)
         return f"{space.size:,} exchangeable groups of {bare}"
     if isinstance(space, Globe):
         return f"a map on the globe of {space.key}"
@@ -326,8 +327,8 @@ def components_shown(table: pd.DataFrame) -> pd.DataFrame:
     return pd.DataFrame(
         {
             "effective df": [f"{v:.2f}" for v in table["effective_df"]],
-            "p: none": [_p_text(v) for v in table["p_none"]],
-            "p: straight": [_p_text(v) for v in table["p_straight"]],
+            "p: none": [p_text(v) for v in table["p_none"]],
+            "p: straight": [p_text(v) for v in table["p_straight"]],
             "share": [_percent(v) for v in table["share"]],
             "overlap": ["" if np.isnan(v) else f"{v:.2f}" for v in table["overlap"]],
             "smoothing": [_smoothing_text(v) for v in table["smoothing"]],
@@ -375,7 +376,7 @@ def coefficients_shown(table: pd.DataFrame) -> pd.DataFrame:
                 f"{low:.5g} to {high:.5g}"
                 for low, high in zip(table["lower"], table["upper"], strict=True)
             ],
-            "p": [_p_text(v) for v in table["p"]],
+            "p": [p_text(v) for v in table["p"]],
         },
         index=list(table.index),
     )
@@ -383,9 +384,3 @@ def coefficients_shown(table: pd.DataFrame) -> pd.DataFrame:
 
 def _coefficients_text(table: pd.DataFrame) -> str:
     return textwrap.indent(coefficients_shown(table).to_string(), "  ")
-
-
-def _p_text(value: float) -> str:
-    if np.isnan(value):
-        return ""
-    return "< 0.001" if value < 0.001 else f"{value:.3f}"

@@ -7,8 +7,8 @@ additive over chunks of rows, so that a chunk may be anything that can be summed
 from __future__ import annotations
 
 from abc import ABC, abstractmethod
-from dataclasses import dataclass
-from typing import NamedTuple
+from dataclasses import dataclass, replace
+from typing import NamedTuple, Self
 
 import numpy as np
 
@@ -69,10 +69,50 @@ class Sums:
         )
 
 
+@dataclass(frozen=True)
 class Rows(ABC):
-    """Rows of the model's columns, with outcome, weights and offset."""
+    """Rows of the model's columns, with outcome, weights and offset.
+
+    How the columns are held is each kind's own; what is asked of them is the same.
+    """
+
+    y: FloatArray  # (n,)
+    weights: FloatArray  # (n,) prior weight, times count, times trials
+    offset: FloatArray  # (n,)
+
+    @property
+    @abstractmethod
+    def layout(self) -> Layout:
+        """Where the coefficients are."""
 
     @abstractmethod
+    def gram(self, weight: FloatArray) -> Gram:
+        """X'WX with these weights (n,)."""
+
+    @abstractmethod
+    def summed(self, values: FloatArray) -> FloatArray:
+        """X' · values (n,), shape (P,)."""
+
+    @abstractmethod
+    def linear_predictor(self, coefficients: FloatArray) -> FloatArray:
+        """offset + Xβ, shape (n,)."""
+
+    @abstractmethod
+    def variances(self, inner: Posterior) -> FloatArray:
+        """x_i'Mx_i of each row, M = `inner`, (n,)."""
+
+    @abstractmethod
+    def part(self, chosen: IntArray) -> Rows:
+        """Only those rows."""
+
+    @abstractmethod
+    def without(self, columns: IntArray) -> Rows:
+        """The same rows without some of the dense columns."""
+
+    @abstractmethod
+    def log_det_design(self, p: int, counts: FloatArray) -> float:
+        """log|T'T| of the first p columns T, each row counted `counts` (n,) times."""
+
     def sweep(
         self,
         coefficients: FloatArray,
@@ -86,41 +126,36 @@ class Rows(ABC):
         X'WX has the observed weights, or the Fisher weights if asked for; `gram` where it is known
         already.
         """
+        eta = self.linear_predictor(coefficients)
+        curvature = outcome.curvature(self.y, eta, self.weights)
+        if gram is None:
+            gram = self.gram(curvature.fisher if fisher else curvature.observed)
+        return Sums(
+            at=coefficients,
+            gram=gram,
+            score=self.summed(curvature.slope),
+            deviance=outcome.deviance(self.y, outcome.mean(eta), self.weights),
+            layout=self.layout,
+        )
 
-    @abstractmethod
     def deviance(self, coefficients: FloatArray, outcome: Outcome) -> float:
         """The deviance alone."""
+        mean = outcome.mean(self.linear_predictor(coefficients))
+        return outcome.deviance(self.y, mean, self.weights)
 
-    @abstractmethod
     def leverage_sweep(
         self, coefficients: FloatArray, outcome: Outcome, inner: Posterior, *, fisher: bool = False
     ) -> FloatArray:
         """Σ_i (x_i' M x_i) w_i′ x_i (P,), M = `inner`, w′ the derivative of the weight in η."""
+        eta = self.linear_predictor(coefficients)
+        observed, expected = outcome.weight_slopes(self.y, eta, self.weights)
+        return self.summed(self.variances(inner) * (expected if fisher else observed))
 
-    @abstractmethod
-    def without(self, columns: IntArray) -> Rows:
-        """The same rows without some of the dense columns."""
-
-    @abstractmethod
-    def part(self, chosen: IntArray) -> Rows:
-        """Only those rows."""
-
-    @abstractmethod
-    def fitted_to(self, part: FloatArray) -> Rows:
+    def fitted_to(self, part: FloatArray) -> Self:
         """The same columns and weights with another outcome (n,), and no offset."""
+        return replace(self, y=part, offset=np.zeros_like(part))
 
-    @abstractmethod
-    def variances(self, inner: Posterior) -> FloatArray:
-        """x_i'Mx_i of each row, M = `inner`, (n,)."""
-
-    @abstractmethod
     def variation(self) -> float:
         """The outcome's weighted sum of squares about its mean."""
-
-    @abstractmethod
-    def log_det_design(self, p: int, counts: FloatArray) -> float:
-        """log|T'T| of the first p columns T, each row counted `counts` (n,) times."""
-
-    @abstractmethod
-    def linear_predictor(self, coefficients: FloatArray) -> FloatArray:
-        """offset + Xβ, shape (n,)."""
+        about = self.y - np.average(self.y, weights=self.weights)
+        return float(self.weights @ about**2)

@@ -11,10 +11,9 @@ from functools import cached_property
 import numpy as np
 import scipy.sparse
 
-from addmodel.matrix import DesignMatrix, IntArray
-from addmodel.outcomes import Outcome
+from addmodel.matrix import DesignMatrix, IntArray, Layout
 from addmodel.posterior import Posterior
-from addmodel.rows.base import Gram, Rows, Sums
+from addmodel.rows.base import Gram, Rows
 from addmodel.spaces.base import FloatArray
 
 
@@ -23,31 +22,12 @@ class DenseRows(Rows):
     """All rows in memory."""
 
     matrix: DesignMatrix
-    y: FloatArray  # (n,)
-    weights: FloatArray  # (n,) prior weight, times count, times trials
-    offset: FloatArray  # (n,)
 
-    def sweep(
-        self,
-        coefficients: FloatArray,
-        outcome: Outcome,
-        *,
-        fisher: bool = False,
-        gram: Gram | None = None,
-    ) -> Sums:
-        eta = self.linear_predictor(coefficients)
-        curvature = outcome.curvature(self.y, eta, self.weights)
-        if gram is None:
-            gram = self._gram(curvature.fisher if fisher else curvature.observed)
-        return Sums(
-            at=coefficients,
-            gram=gram,
-            score=self._summed(curvature.slope),
-            deviance=outcome.deviance(self.y, outcome.mean(eta), self.weights),
-            layout=self.matrix.layout,
-        )
+    @property
+    def layout(self) -> Layout:
+        return self.matrix.layout
 
-    def _gram(self, weight: FloatArray) -> Gram:
+    def gram(self, weight: FloatArray) -> Gram:
         dense, wide, layout = self.matrix.dense, self.matrix.wide, self.matrix.layout
         b, levels = wide.shape[1], layout.levels
         across = np.zeros((levels, b, layout.dense))
@@ -83,7 +63,7 @@ class DenseRows(Rows):
             (values[order], order, starts), shape=(len(starts) - 1, len(order))
         )
 
-    def _summed(self, values: FloatArray) -> FloatArray:
+    def summed(self, values: FloatArray) -> FloatArray:
         """X' · values (P,)."""
         total: FloatArray = self.matrix.dense.T @ values
         if not self.matrix.layout.parts:
@@ -94,18 +74,6 @@ class DenseRows(Rows):
             for column in wide.T
         ]
         return np.concatenate([total, layout.flat(np.stack(apart, axis=1))])
-
-    def deviance(self, coefficients: FloatArray, outcome: Outcome) -> float:
-        mean = outcome.mean(self.linear_predictor(coefficients))
-        return outcome.deviance(self.y, mean, self.weights)
-
-    def leverage_sweep(
-        self, coefficients: FloatArray, outcome: Outcome, inner: Posterior, *, fisher: bool = False
-    ) -> FloatArray:
-        eta = self.linear_predictor(coefficients)
-        observed, expected = outcome.weight_slopes(self.y, eta, self.weights)
-        leverage = inner.variance(self.matrix)
-        return self._summed(leverage * (expected if fisher else observed))
 
     def without(self, columns: IntArray) -> DenseRows:
         matrix = self.matrix
@@ -121,17 +89,10 @@ class DenseRows(Rows):
             wide=matrix.wide[chosen],
             codes=matrix.codes[chosen],
         )
-        return DenseRows(fewer, self.y[chosen], self.weights[chosen], self.offset[chosen])
-
-    def fitted_to(self, part: FloatArray) -> DenseRows:
-        return replace(self, y=part, offset=np.zeros_like(part))
+        return DenseRows(self.y[chosen], self.weights[chosen], self.offset[chosen], fewer)
 
     def variances(self, inner: Posterior) -> FloatArray:
         return inner.variance(self.matrix)
-
-    def variation(self) -> float:
-        about = self.y - np.average(self.y, weights=self.weights)
-        return float(self.weights @ about**2)
 
     def log_det_design(self, p: int, counts: FloatArray) -> float:
         plain = self.matrix.dense[:, :p] * np.sqrt(counts)[:, None]

@@ -13,10 +13,9 @@ from dataclasses import dataclass, replace
 import numpy as np
 import scipy.sparse
 
-from addmodel.matrix import IntArray, Layout
-from addmodel.outcomes import Outcome
+from addmodel.matrix import DesignMatrix, IntArray, Layout
 from addmodel.posterior import Posterior
-from addmodel.rows.base import Gram, Rows, Sums
+from addmodel.rows.base import Gram, Rows
 from addmodel.spaces.base import FloatArray
 
 LARGEST = 4_000_000
@@ -45,32 +44,13 @@ class TableRows(Rows):
     parts: tuple[Part, ...]
     wide: FloatArray  # (n, b) columns of the group set apart
     codes: IntArray  # (n,) its levels
-    layout: Layout
-    y: FloatArray
-    weights: FloatArray
-    offset: FloatArray
+    arranged: Layout
 
-    def sweep(
-        self,
-        coefficients: FloatArray,
-        outcome: Outcome,
-        *,
-        fisher: bool = False,
-        gram: Gram | None = None,
-    ) -> Sums:
-        eta = self.linear_predictor(coefficients)
-        curvature = outcome.curvature(self.y, eta, self.weights)
-        if gram is None:
-            gram = self._gram(curvature.fisher if fisher else curvature.observed)
-        return Sums(
-            at=coefficients,
-            gram=gram,
-            score=self._summed(curvature.slope),
-            deviance=outcome.deviance(self.y, outcome.mean(eta), self.weights),
-            layout=self.layout,
-        )
+    @property
+    def layout(self) -> Layout:
+        return self.arranged
 
-    def _gram(self, weight: FloatArray) -> Gram:
+    def gram(self, weight: FloatArray) -> Gram:
         dense = np.zeros((self.layout.dense, self.layout.dense))
         for i, a in enumerate(self.parts):
             mass = np.bincount(a.cells, weight, minlength=a.count)
@@ -95,7 +75,7 @@ class TableRows(Rows):
                 )
         return Gram(dense, across, own)
 
-    def _summed(self, values: FloatArray) -> FloatArray:
+    def summed(self, values: FloatArray) -> FloatArray:
         total = np.zeros(self.layout.dense)
         for part in self.parts:
             total[part.places] = part.columns.T @ np.bincount(
@@ -108,17 +88,6 @@ class TableRows(Rows):
             for column in self.wide.T
         ]
         return np.concatenate([total, self.layout.flat(np.stack(apart, axis=1))])
-
-    def deviance(self, coefficients: FloatArray, outcome: Outcome) -> float:
-        mean = outcome.mean(self.linear_predictor(coefficients))
-        return outcome.deviance(self.y, mean, self.weights)
-
-    def leverage_sweep(
-        self, coefficients: FloatArray, outcome: Outcome, inner: Posterior, *, fisher: bool = False
-    ) -> FloatArray:
-        eta = self.linear_predictor(coefficients)
-        observed, expected = outcome.weight_slopes(self.y, eta, self.weights)
-        return self._summed(self.variances(inner) * (expected if fisher else observed))
 
     def variances(self, inner: Posterior) -> FloatArray:
         if self.layout.parts:
@@ -140,8 +109,6 @@ class TableRows(Rows):
 
     def _variances_by_rows(self, inner: Posterior) -> FloatArray:
         """Where a group is set apart a row's z has no cell: chunk by chunk."""
-        from addmodel.matrix import DesignMatrix
-
         total = np.empty(len(self.y))
         for start in range(0, len(total), CHUNK):
             at = slice(start, start + CHUNK)
@@ -162,7 +129,7 @@ class TableRows(Rows):
             places = new[part.places][stays]
             parts.append(replace(part, columns=part.columns[:, stays], places=places))
         layout = replace(self.layout, dense=len(kept))
-        return replace(self, parts=tuple(parts), layout=layout)
+        return replace(self, parts=tuple(parts), arranged=layout)
 
     def part(self, chosen: IntArray) -> TableRows:
         return replace(
@@ -175,15 +142,8 @@ class TableRows(Rows):
             offset=self.offset[chosen],
         )
 
-    def fitted_to(self, part: FloatArray) -> TableRows:
-        return replace(self, y=part, offset=np.zeros_like(part))
-
-    def variation(self) -> float:
-        about = self.y - np.average(self.y, weights=self.weights)
-        return float(self.weights @ about**2)
-
     def log_det_design(self, p: int, counts: FloatArray) -> float:
-        gram = self._gram(counts).dense[:p, :p]
+        gram = self.gram(counts).dense[:p, :p]
         return float(np.linalg.slogdet(gram)[1])
 
     def linear_predictor(self, coefficients: FloatArray) -> FloatArray:
